@@ -1,0 +1,151 @@
+r"""Triangles: the QR summary of a group of whitened rows, and what can be done with it alone.
+
+A triangle stands for the rows (A, y, sigma) of its group through
+
+    sum_i (y_i - a_i . c)^2 / sigma_i^2 = |R (c - base) - z|^2 + rss     for every c,
+
+with R of shape (m, p), m <= p, upper trapezoidal. It is taken about a `base` near the
+solution, since positions are up to 1e9 times their sigma: z and rss then hold small
+numbers. The rule of the fast merge is that of orthogonal reduction of stacked
+triangles (Golub and Van Loan, Matrix Computations, 4th ed., section 5.2; common
+practice in sequential least squares).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import solve_triangular
+from scipy.linalg.lapack import dgeqrf
+
+
+@dataclass(frozen=True, eq=False)
+class Triangle:
+    """QR summary of a group of rows.
+
+    Attributes
+    ----------
+    r : ndarray of float, shape (m, p)
+        Upper trapezoidal factor of the whitened rows; m <= p.
+    z : ndarray of float, shape (m,)
+        Rotated whitened residuals about `base`.
+    rss : float
+        Weighted sum of squares that no parameter can reduce.
+    n : int
+        Number of lines (repeats of one transition count).
+    base : ndarray of float, shape (p,)
+        The parameters about which residuals are taken.
+    log_sigma : float
+        Sum of ln(sigma) over the lines, for likelihoods.
+    """
+
+    r: np.ndarray
+    z: np.ndarray
+    rss: float
+    n: int
+    base: np.ndarray
+    log_sigma: float = 0.0
+
+    @property
+    def parameters(self) -> int:
+        return self.r.shape[1]
+
+    def scaled(self, factor: float) -> Triangle:
+        """The triangle with every sigma of the group multiplied by `factor`."""
+        return Triangle(
+            self.r / factor,
+            self.z / factor,
+            self.rss / factor**2,
+            self.n,
+            self.base,
+            self.log_sigma + self.n * float(np.log(factor)),
+        )
+
+    def shifted(self, base: np.ndarray) -> Triangle:
+        """The same rows with residuals about another base: z' = z + R (base - base')."""
+        moved = self.z + self.r @ (self.base - base)
+        return Triangle(self.r, moved, self.rss, self.n, np.asarray(base, dtype=float), self.log_sigma)
+
+    def chosen(self, columns) -> Triangle:
+        """The triangle of the model that keeps only `columns` (indices), the others fixed at their base."""
+        columns = np.asarray(columns)
+        return reduce_rows(
+            self.r[:, columns], self.z, self.base[columns], n=self.n, rss=self.rss, log_sigma=self.log_sigma
+        )
+
+    def chi2(self, values: np.ndarray) -> float:
+        """Weighted sum of squares at `values`, shape (p,)."""
+        step = self.r @ (values - self.base) - self.z
+        return float(step @ step) + self.rss
+
+
+def reduce_rows(rows, residual, base, *, n: int, rss: float = 0.0, log_sigma: float = 0.0) -> Triangle:
+    """Triangle of whitened rows.
+
+    Parameters
+    ----------
+    rows : ndarray of float, shape (m, p)
+        Whitened design rows; not modified.
+    residual : ndarray of float, shape (m,)
+        Whitened residuals about `base`.
+    base : ndarray of float, shape (p,)
+    n : int
+        Number of lines that the rows stand for.
+    rss : float
+        Sum of squares already outside the reach of the parameters (spread within repeats).
+    """
+    height, width = rows.shape
+    stacked = np.empty((height, width + 1), order="F")
+    stacked[:, :width] = rows
+    stacked[:, width] = residual
+    packed = dgeqrf(stacked, overwrite_a=True)[0]
+    kept = min(height, width)
+    if height > width:
+        rss += float(packed[width, width]) ** 2
+    return Triangle(
+        np.triu(packed[:kept, :width]),
+        np.array(packed[:kept, width]),
+        rss,
+        n,
+        np.asarray(base, dtype=float),
+        log_sigma,
+    )
+
+
+def merge(triangles, base=None) -> Triangle:
+    """One triangle for several groups; those about other bases are shifted first.
+
+    Parameters
+    ----------
+    triangles : sequence of Triangle, at least one, all with the same p
+    base : ndarray of float, shape (p,), optional
+        Base of the result; by default that of the first triangle.
+    """
+    triangles = list(triangles)
+    base = triangles[0].base if base is None else np.asarray(base, dtype=float)
+    moved = [item if item.base is base else item.shifted(base) for item in triangles]
+    return reduce_rows(
+        np.concatenate([item.r for item in moved]),
+        np.concatenate([item.z for item in moved]),
+        base,
+        n=sum(item.n for item in moved),
+        rss=float(sum(item.rss for item in moved)),
+        log_sigma=float(sum(item.log_sigma for item in moved)),
+    )
+
+
+def solve(triangle: Triangle) -> np.ndarray:
+    """Least-squares parameters of a square, non-singular triangle, shape (p,).
+
+    Judge the rank first (`dunhamfit.algebra.rank`): this only substitutes back.
+    """
+    return triangle.base + solve_triangular(triangle.r, triangle.z)
+
+
+def covariance_factor(r: np.ndarray) -> np.ndarray:
+    """F = R^-1, upper triangular, shape (p, p), so that the covariance is F F^T.
+
+    The covariance is never formed by inverting R^T R, whose condition is the square.
+    """
+    return solve_triangular(r, np.eye(r.shape[0]))
