@@ -1,0 +1,139 @@
+"""Numbers carried as an unevaluated sum of two floats, some 32 decimal digits.
+
+A pair (high, low) stands for high + low exactly, with |low| at most half a unit in the
+last place of high. Only additions and multiplications of float64 arrays are used, so
+results are the same on every machine with IEEE 754 arithmetic; numpy's longdouble is
+no wider than float64 on several of them. The error-free sum is Knuth's, the product
+Dekker's (T. J. Dekker, Numer. Math. 18, 224 (1971)); the sum of many products is that
+of T. Ogita, S. M. Rump and S. Oishi, SIAM J. Sci. Comput. 26, 1955 (2005).
+"""
+
+from __future__ import annotations
+
+from decimal import Decimal
+from typing import NamedTuple
+
+import numpy as np
+
+_SPLITTER = 134217729.0  # 2^27 + 1: cuts a 53-bit significand into two halves
+
+
+class Extended(NamedTuple):
+    """high + low, two float64 arrays of one shape."""
+
+    high: np.ndarray
+    low: np.ndarray
+
+    @property
+    def shape(self) -> tuple[int, ...]:
+        return self.high.shape
+
+    @property
+    def T(self) -> Extended:  # noqa: N802 - numpy's own name for it
+        return Extended(self.high.T, self.low.T)
+
+    def take(self, index, axis: int = -1) -> Extended:
+        """The entries that `index` picks along `axis`."""
+        return Extended(np.take(self.high, index, axis), np.take(self.low, index, axis))
+
+
+def exact(value) -> Extended:
+    """An array of floats (or integers below 2^53), with nothing in the low part."""
+    high = np.asarray(value, dtype=float)
+    return Extended(high, np.zeros_like(high))
+
+
+def from_decimal(value: Decimal) -> Extended:
+    """One decimal number, to the 32 digits that a pair holds."""
+    high = float(value)
+    return Extended(np.float64(high), np.float64(float(value - Decimal(high))))
+
+
+def two_sum(a, b) -> Extended:
+    """a + b without error, for any floats."""
+    total = a + b
+    other = total - a
+    return Extended(total, (a - (total - other)) + (b - other))
+
+
+def _fast_two_sum(a, b) -> Extended:
+    """a + b without error where |a| >= |b|."""
+    total = a + b
+    return Extended(total, b - (total - a))
+
+
+def _halves(a):
+    spread = _SPLITTER * a
+    upper = spread - (spread - a)
+    return upper, a - upper
+
+
+def two_product(a, b) -> Extended:
+    """a * b without error, for floats below 2^996 in size."""
+    product = a * b
+    a_upper, a_lower = _halves(a)
+    b_upper, b_lower = _halves(b)
+    error = ((a_upper * b_upper - product) + a_upper * b_lower + a_lower * b_upper) + a_lower * b_lower
+    return Extended(product, error)
+
+
+def add(a: Extended, b: Extended) -> Extended:
+    """a + b; relative error about 2^-104 unless the sum cancels."""
+    total, error = two_sum(a.high, b.high)
+    tail, tail_error = two_sum(a.low, b.low)
+    total, error = _fast_two_sum(total, error + tail)
+    return _fast_two_sum(total, error + tail_error)
+
+
+def subtract(a: Extended, b: Extended) -> Extended:
+    """a - b."""
+    return add(a, Extended(-b.high, -b.low))
+
+
+def multiply(a: Extended, b: Extended) -> Extended:
+    """a * b; relative error about 2^-102."""
+    product, error = two_product(a.high, b.high)
+    return _fast_two_sum(product, error + (a.high * b.low + a.low * b.high))
+
+
+def powers(base: Extended, highest: int) -> list[Extended]:
+    """base^0 ... base^highest."""
+    table = [exact(np.ones_like(base.high))]
+    for _ in range(highest):
+        table.append(multiply(table[-1], base))
+    return table
+
+
+def product_with(matrix: Extended, vector: Extended) -> Extended:
+    """matrix @ vector, summed as if in twice the precision.
+
+    Parameters
+    ----------
+    matrix : Extended, shape (p, n)
+        Given by columns of the product: the sum runs over the first axis.
+    vector : Extended, shape (p,)
+
+    Returns
+    -------
+    Extended, shape (n,)
+    """
+    weights = Extended(vector.high[:, None], vector.low[:, None])
+    products = multiply(matrix, weights)
+    return sum_first_axis(products)
+
+
+def sum_first_axis(terms: Extended) -> Extended:
+    """Sum over the first axis by pairwise halving, so that each level is one vectorised addition."""
+    high, low = terms
+    if not len(high):
+        zero = np.zeros(high.shape[1:])
+        return Extended(zero, zero)
+    while len(high) > 1:
+        half = len(high) // 2
+        summed = add(Extended(high[:half], low[:half]), Extended(high[half : 2 * half], low[half : 2 * half]))
+        if len(high) % 2:
+            high = np.concatenate([summed.high, high[-1:]])
+            low = np.concatenate([summed.low, low[-1:]])
+        else:
+            high, low = summed
+    return Extended(high[0], low[0])

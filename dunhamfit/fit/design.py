@@ -1,0 +1,267 @@
+"""Design rows: from lines and a model to a linear least-squares problem.
+
+Row of a line: derivative of E(upper) - E(lower) + offset + scale * position with respect
+to every parameter (conventions: `dunhamfit.molecule.terms`; calibration: observed = true
++ offset + scale * position). The many lines share few levels, so that the powers are
+made once for each distinct level, to some 30 digits, and then gathered.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from dunhamfit.algebra.extended import Extended, exact, multiply, powers, product_with, subtract, two_sum
+from dunhamfit.algebra.rows import Rows
+from dunhamfit.errors import CannotDetermine
+from dunhamfit.fit.model import Model
+from dunhamfit.lines.line_list import LineList
+
+
+@dataclass(frozen=True, eq=False)
+class Groups:
+    """The groups of a fit: the used lines of one source, isotopologue and band each.
+
+    Attributes
+    ----------
+    source, isotopologue, v_upper, v_lower, lines : ndarray of int, shape (groups,)
+        Codes as in the LineList, and the number of used lines.
+    """
+
+    source: np.ndarray
+    isotopologue: np.ndarray
+    v_upper: np.ndarray
+    v_lower: np.ndarray
+    lines: np.ndarray
+
+    def __len__(self) -> int:
+        return len(self.source)
+
+
+@dataclass(frozen=True, eq=False)
+class Design:
+    """Rows of a model for the used lines.
+
+    Attributes
+    ----------
+    rows : Rows
+        One row for each distinct transition of a group; the priors are the last group, if there are any.
+    groups : Groups
+        Of the lines only.
+    used : ndarray of int, shape (n_used,)
+        Indices of the used lines.
+    group_of, row_of : ndarray of int, shape (n_used,)
+        Group and row of each used line.
+    """
+
+    rows: Rows
+    groups: Groups
+    used: np.ndarray
+    group_of: np.ndarray
+    row_of: np.ndarray
+
+
+def build_design(model: Model, lines: LineList) -> Design:
+    """Rows of `model` for the used lines of `lines`, and for its priors.
+
+    Raises
+    ------
+    CannotDetermine
+        If no line is used.
+    """
+    used = np.flatnonzero(lines.used)
+    if not len(used):
+        raise CannotDetermine("no line is used: every line is excluded, or the list is empty")
+    groups, group_of = _group(lines, used)
+    order, firsts, row_of = _pool(lines, used, group_of)
+    leading = used[order[firsts]]
+    weights = 1.0 / lines.sigma[used] ** 2
+    observed, scale, spread = _pooled(lines.position[used], weights, order, firsts, row_of)
+    starts = np.searchsorted(group_of[order[firsts]], np.arange(len(groups) + 1))
+    count = len(groups)
+    rows = Rows(
+        matrix=_columns(model, lines, leading, observed.high),
+        observed=observed,
+        scale=scale,
+        starts=starts,
+        lines=groups.lines,
+        spread=np.bincount(group_of, spread, count) if spread is not None else np.zeros(count),
+        log_sigma=np.bincount(group_of, -0.5 * np.log(weights), count),
+    )
+    return Design(_with_priors(model, rows), groups, used, group_of, row_of)
+
+
+def calculate(model: Model, lines: LineList, values: np.ndarray) -> Extended:
+    """Calculated positions of all lines, calibration terms included, in cm-1 to some 30 digits.
+
+    Parameters
+    ----------
+    model : Model
+    lines : LineList
+    values : ndarray of float, shape (p,)
+
+    Returns
+    -------
+    Extended, shape (n_lines,)
+    """
+    levels, upper, lower = _levels(lines, np.arange(len(lines)))
+    constants = len(model.constants)
+    energy = product_with(level_columns(model, lines.isotopologues, *levels), exact(values[:constants]))
+    line = subtract(energy.take(upper), energy.take(lower))
+    calibration = np.zeros(len(lines))
+    for parameter, value in zip(model.parameters[constants:], values[constants:], strict=True):
+        calibration += value * _calibration_column(parameter, lines, slice(None), lines.position)
+    total = two_sum(line.high, calibration)
+    return two_sum(total.high, total.low + line.low)
+
+
+def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
+    """Derivative of each level's energy with respect to every constant.
+
+    Parameters
+    ----------
+    model : Model
+    isotopologues : sequence of str
+        Names that `code` indexes.
+    code, v, j : ndarray of int, shape (levels,)
+
+    Returns
+    -------
+    Extended, shape (constants, levels)
+    """
+    constants = model.constants
+    k = np.array([item.k for item in constants])
+    l = np.array([item.l for item in constants])  # noqa: E741
+    # 2v + 1 and J(J + 1) are whole numbers and their powers exact in 106 bits; the halves come out at the end.
+    vibration = powers(exact(2 * v + 1.0), int(k.max()))
+    rotation = powers(exact(j * (j + 1.0)), int(l.max()))
+    product = multiply(_stack(vibration, k), _stack(rotation, l))
+    halves = np.ldexp(1.0, -k)[:, None]
+    product = Extended(product.high * halves, product.low * halves)
+    factors = np.stack([model.mass_factors(name) for name in isotopologues], axis=-1)
+    if np.all(factors == [[1.0], [0.0]]):
+        return product
+    factors = factors[:, :, code]
+    return multiply(product, Extended(factors[:, 0], factors[:, 1]))
+
+
+def _stack(table: list[Extended], index: np.ndarray) -> Extended:
+    high = np.stack([entry.high for entry in table])
+    low = np.stack([entry.low for entry in table])
+    return Extended(high[index], low[index])
+
+
+def _group(lines: LineList, used: np.ndarray) -> tuple[Groups, np.ndarray]:
+    v_upper, v_lower = lines.v_upper[used], lines.v_lower[used]
+    isotopologue, source = lines.isotopologue[used], lines.source[used]
+    width = int(max(v_upper.max(), v_lower.max())) + 1
+    key = ((source.astype(np.int64) * len(lines.isotopologues) + isotopologue) * width + v_upper) * width + v_lower
+    index, number = _renumber(key)
+    rest, lower = np.divmod(index, width)
+    rest, upper = np.divmod(rest, width)
+    source, isotopologue = np.divmod(rest, len(lines.isotopologues))
+    return Groups(source, isotopologue, upper, lower, np.bincount(number)), number
+
+
+def _renumber(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Distinct keys in ascending order, and the number of each entry among them.
+
+    A table over the range of keys where that is short, which is much faster than sorting.
+    """
+    low = int(key.min())
+    span = int(key.max()) - low + 1
+    if span > 4 * len(key) + 1_000_000:
+        return np.unique(key, return_inverse=True)
+    present = np.zeros(span, dtype=bool)
+    present[key - low] = True
+    number = np.cumsum(present) - 1
+    return np.flatnonzero(present) + low, number[key - low]
+
+
+def _pool(lines: LineList, used: np.ndarray, group_of: np.ndarray):
+    """Order of the used lines by group and transition, first line of each transition, row of each line."""
+    width = int(max(lines.j_upper[used].max(), lines.j_lower[used].max())) + 1
+    key = (group_of * width + lines.j_upper[used]) * width + lines.j_lower[used]
+    order = np.argsort(key, kind="stable")
+    ordered = key[order]
+    new = np.ones(len(order), dtype=bool)
+    new[1:] = ordered[1:] != ordered[:-1]
+    row_of = np.empty(len(order), dtype=np.int64)
+    row_of[order] = np.cumsum(new) - 1
+    return order, np.flatnonzero(new), row_of
+
+
+def _pooled(position, weights, order, firsts, row_of) -> tuple[Extended, np.ndarray, np.ndarray | None]:
+    """Weighted mean, 1 / sigma and within sum of squares (by line) of repeats.
+
+    Means are taken of differences from the first repeat: the whole positions would lose
+    what repeats have gained.
+    """
+    if len(firsts) == len(order):
+        return exact(position[order]), np.sqrt(weights[order]), None
+    first = position[order[firsts]]
+    total = np.bincount(row_of, weights)
+    from_first = position - first[row_of]
+    mean = np.bincount(row_of, weights * from_first) / total
+    spread = weights * (from_first - mean[row_of]) ** 2
+    return two_sum(first, mean), np.sqrt(total), spread
+
+
+def _levels(lines: LineList, chosen: np.ndarray):
+    """Distinct levels (isotopologue code, v, J) of the chosen lines, and the upper and lower level of each."""
+    j_upper, j_lower = lines.j_upper[chosen], lines.j_lower[chosen]
+    v_upper, v_lower = lines.v_upper[chosen], lines.v_lower[chosen]
+    j_width = int(max(j_upper.max(), j_lower.max())) + 1
+    v_width = int(max(v_upper.max(), v_lower.max())) + 1
+    code = lines.isotopologue[chosen].astype(np.int64) * v_width
+    keys = np.concatenate([(code + v_upper) * j_width + j_upper, (code + v_lower) * j_width + j_lower])
+    distinct, number = _renumber(keys)
+    rest, j = np.divmod(distinct, j_width)
+    code, v = np.divmod(rest, v_width)
+    return (code, v, j), number[: len(chosen)], number[len(chosen) :]
+
+
+def _columns(model: Model, lines: LineList, leading: np.ndarray, observed: np.ndarray) -> Extended:
+    """Design columns of the lines `leading`, shape (p, rows)."""
+    levels, upper, lower = _levels(lines, leading)
+    table = level_columns(model, lines.isotopologues, *levels)
+    constants = subtract(table.take(upper), table.take(lower))
+    calibration = model.parameters[len(model.constants) :]
+    if not calibration:
+        return constants
+    # The scale multiplies the observed position: the difference from the true one is of second order.
+    extra = np.stack([_calibration_column(item, lines, leading, observed) for item in calibration])
+    return Extended(np.concatenate([constants.high, extra]), np.concatenate([constants.low, np.zeros_like(extra)]))
+
+
+def _calibration_column(parameter, lines: LineList, chosen, position: np.ndarray) -> np.ndarray:
+    code = next(i for i, source in enumerate(lines.sources) if source.name == parameter.source)
+    of_source = (lines.source[chosen] == code).astype(float)
+    return of_source if parameter.kind == "offset" else of_source * position
+
+
+def _with_priors(model: Model, rows: Rows) -> Rows:
+    priors = [(i, model.prior(item)) for i, item in enumerate(model.parameters)]
+    priors = [(i, prior) for i, prior in priors if prior is not None and prior.sigma > 0]
+    if not priors:
+        return rows
+    extra = np.zeros((rows.parameters, len(priors)))
+    extra[[i for i, _ in priors], np.arange(len(priors))] = 1.0
+    value = np.array([prior.value for _, prior in priors])
+    sigma = np.array([prior.sigma for _, prior in priors])
+    return Rows(
+        matrix=Extended(
+            np.concatenate([rows.matrix.high, extra], axis=1),
+            np.concatenate([rows.matrix.low, np.zeros_like(extra)], axis=1),
+        ),
+        observed=Extended(
+            np.concatenate([rows.observed.high, value]),
+            np.concatenate([rows.observed.low, np.zeros_like(value)]),
+        ),
+        scale=np.concatenate([rows.scale, 1.0 / sigma]),
+        starts=np.append(rows.starts, rows.starts[-1] + len(priors)),
+        lines=np.append(rows.lines, len(priors)),
+        spread=np.append(rows.spread, 0.0),
+        log_sigma=np.append(rows.log_sigma, np.log(sigma).sum()),
+    )
