@@ -93,6 +93,8 @@ def subtract(a: Extended, b: Extended) -> Extended:
 def multiply(a: Extended, b: Extended) -> Extended:
     """a * b; relative error about 2^-102."""
     product, error = two_product(a.high, b.high)
+    if not (a.low.any() or b.low.any()):
+        return Extended(product, error)
     return _fast_two_sum(product, error + (a.high * b.low + a.low * b.high))
 
 

@@ -27,6 +27,8 @@ from dunhamfit.errors import NotConverged
 # No constant moves by more of its own sigma than the length of the step, and 1e-6 is what is promised.
 # (Where the rows carry no real sigma, the rms residual takes its place.)
 _STEP_IN_SIGMA = 1e-6
+# Or every constant stands still in its last places, which is all that float64 can hold.
+_LAST_PLACES = 4.0
 _ROUNDS = 20
 
 
@@ -79,19 +81,21 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
         or is singular to working precision.
     """
     values = np.array(start, dtype=float)
-    size = last = np.inf
+    last = np.inf
     for _ in range(_ROUNDS):
         residual = rows.residuals(values)
         gradient = rows.slices.gradient(weighted(residual, rows.scale))
         half = dtrtrs(r, gradient, trans=1)[0]
+        step = dtrtrs(r, half)[0]
         size = float(np.sqrt(half @ half))  # length of the step in units of sigma
         if not size < last / 2:
             break
-        values, last = values + dtrtrs(r, half)[0], size
-    if not last <= _STEP_IN_SIGMA * np.sqrt(max(np.sum((residual.high * rows.scale) ** 2), 1.0)):
+        values, last = values + step, size
+    rms = np.sqrt(max(float(np.sum((residual.high * rows.scale) ** 2)), 1.0))
+    if not (size <= _STEP_IN_SIGMA * rms or np.all(np.abs(step) <= _LAST_PLACES * np.spacing(np.abs(values)))):
         raise NotConverged(
             "the refinement of the least-squares solution did not settle; the model is close to undetermined",
-            state={"step_in_sigma": last, "values": values},
+            state={"step_in_sigma": size, "values": values},
         )
     whitened = residual.high * rows.scale
     return Solution(values, r, residual, float(whitened @ whitened) + float(rows.spread.sum()))

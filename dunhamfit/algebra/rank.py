@@ -45,11 +45,12 @@ def judge(r: np.ndarray, order=None) -> Rank:
     norms = np.sqrt(np.einsum("ij,ij->j", r, r))
     empty = norms == 0
     scaled = r / np.where(empty, 1.0, norms)
-    _, singular, directions = svd(scaled, full_matrices=len(r) < width, check_finite=False)
-    singular = np.concatenate([singular, np.zeros(width - len(singular))])
+    singular = np.zeros(width)
+    singular[: min(r.shape)] = svd(scaled, compute_uv=False, check_finite=False)
     lost = int(np.sum(singular <= SINGULAR_BELOW * singular[0]))
     if not lost:
         return Rank(float(singular[0] / singular[-1]), (), np.empty((0, width)))
+    directions = svd(scaled, check_finite=False)[2]
     order = np.arange(width) if order is None else np.asarray(order)
     return Rank(float("inf"), _last_dependent(scaled, order, lost), directions[width - lost :])
 

@@ -62,8 +62,15 @@ class Design:
     row_of: np.ndarray
 
 
-def build_design(model: Model, lines: LineList) -> Design:
+def build_design(model: Model, lines: LineList, line_weights: np.ndarray | None = None) -> Design:
     """Rows of `model` for the used lines of `lines`, and for its priors.
+
+    Parameters
+    ----------
+    model : Model
+    lines : LineList
+    line_weights : ndarray of float, shape (n_lines,), optional
+        Weights of a robust fit, by which 1 / sigma^2 of each line is multiplied.
 
     Raises
     ------
@@ -77,6 +84,8 @@ def build_design(model: Model, lines: LineList) -> Design:
     order, firsts, row_of = _pool(lines, used, group_of)
     leading = used[order[firsts]]
     weights = 1.0 / lines.sigma[used] ** 2
+    if line_weights is not None:
+        weights = weights * line_weights[used]
     observed, scale, spread = _pooled(lines.position[used], weights, order, firsts, row_of)
     starts = np.searchsorted(group_of[order[firsts]], np.arange(len(groups) + 1))
     count = len(groups)
@@ -139,8 +148,11 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     product = multiply(_stack(vibration, k), _stack(rotation, l))
     halves = np.ldexp(1.0, -k)[:, None]
     product = Extended(product.high * halves, product.low * halves)
-    factors = np.stack([model.mass_factors(name) for name in isotopologues], axis=-1)
-    if np.all(factors == [[1.0], [0.0]]):
+    present = np.flatnonzero(np.bincount(code, minlength=len(isotopologues)))
+    factors = np.zeros((len(constants), 2, len(isotopologues)))
+    for index in present:
+        factors[:, :, index] = model.mass_factors(isotopologues[index])
+    if np.all(factors[:, :, present] == [[1.0], [0.0]]):
         return product
     factors = factors[:, :, code]
     return multiply(product, Extended(factors[:, 0], factors[:, 1]))

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from decimal import Decimal, localcontext
-from functools import cached_property, lru_cache
+from functools import cached_property
 from types import MappingProxyType
 
 import numpy as np
@@ -137,23 +137,23 @@ class Model:
 
     def isotopologue(self, name: str) -> Isotopologue:
         """Another isotopologue of the molecule, by name."""
-        return isotopologue(name, self.masses)
+        return Isotopologue.parse(name, self.masses)
 
     def mass_factors(self, name: str) -> np.ndarray:
         """Factor of each constant in isotopologue `name`, shape (constants, 2): high and low part.
 
         rho^(k + 2l) for a term, times M_A(0)/M_A(a) - 1 for a breakdown term.
         """
-        return _mass_factors(self.reference, self.isotopologue(name), self.constants)
+        known = self._known_factors
+        if name not in known:
+            known[name] = _mass_factors(self.reference, self.isotopologue(name), self.constants)
+        return known[name]
+
+    @cached_property
+    def _known_factors(self) -> dict[str, np.ndarray]:
+        return {}
 
 
-@lru_cache(maxsize=256)
-def isotopologue(name: str, masses: Masses) -> Isotopologue:
-    """`Isotopologue.parse`, remembered."""
-    return Isotopologue.parse(name, masses)
-
-
-@lru_cache(maxsize=256)
 def _mass_factors(reference: Isotopologue, other: Isotopologue, constants: tuple[Parameter, ...]) -> np.ndarray:
     rho = mass_ratio(reference, other)
     factors = np.empty((len(constants), 2))
