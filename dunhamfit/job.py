@@ -215,9 +215,14 @@ def _job(tables: Mapping, text: str, path: Path) -> Job:
     model = _table(tables, "model", _MODEL)
     errors = _table(tables, "errors", _ERRORS)
     if "reference" not in molecule:
-        raise UsageError('[molecule] reference is missing; name the isotopologue whose constants are wanted, such as reference = "28Si32S"')
+        raise UsageError(
+            "[molecule] reference is missing; name the isotopologue whose constants are wanted, "
+            'such as reference = "28Si32S"'
+        )
     if "terms" not in model:
-        raise UsageError("[model] terms is missing; give the highest k for l = 0, 1, 2, ..., such as terms = [4, 3, 2, 1]")
+        raise UsageError(
+            "[model] terms is missing; give the highest k for l = 0, 1, 2, ..., such as terms = [4, 3, 2, 1]"
+        )
     masses = _masses(molecule.get("masses", {}))
     Isotopologue.parse(_text(molecule["reference"], "[molecule] reference"), masses)
     sources = _sources(tables.get("source", []), path.parent)
@@ -337,7 +342,9 @@ def _excluded_rows(lines: LineList, exclusion: Exclusion) -> np.ndarray:
     mask = (lines.source == code) & np.isin(lines.row, exclusion.rows)
     if exclusion.file or len(files) > 1:
         if exclusion.file not in files:
-            raise UsageError(f"exclude: source '{exclusion.source}' has several files; name one of {', '.join(files)}")
+            raise UsageError(
+                f"exclude: source '{exclusion.source}' has several files; name one of {', '.join(files)}"
+            )
         mask &= lines.file == files.index(exclusion.file)
     missing = sorted(set(exclusion.rows) - set(lines.row[mask].tolist()))
     if missing:
@@ -352,7 +359,9 @@ def _terms(given: object, named: list[str]) -> TermSet | None:
     if given == "auto":
         return None
     if not isinstance(given, list) or not given:
-        raise UsageError(f'[model] terms must be a list such as [4, 3, 2] or ["Y10", "Y01"], or "auto" (got {given!r})')
+        raise UsageError(
+            f'[model] terms must be a list such as [4, 3, 2] or ["Y10", "Y01"], or "auto" (got {given!r})'
+        )
     if all(isinstance(item, str) for item in given):
         terms = TermSet.from_names(given)
     else:
@@ -365,7 +374,9 @@ def _breakdown(table: object) -> Mapping[str, tuple[str, ...]]:
         raise UsageError('[model] breakdown must be a table, such as breakdown = { Si = ["10", "01"] }')
     for atom, names in table.items():
         if not isinstance(names, list) or not all(isinstance(name, str) for name in names):
-            raise UsageError(f'[model] breakdown: {atom} needs a list of terms, such as ["10", "01"] (got {names!r})')
+            raise UsageError(
+                f'[model] breakdown: {atom} needs a list of terms, such as ["10", "01"] (got {names!r})'
+            )
     return MappingProxyType({atom: tuple(names) for atom, names in table.items()})
 
 
@@ -381,7 +392,9 @@ def _priors(table: object) -> dict[str, Prior]:
             raise UsageError(
                 f"[model] fixed.{name} must be a value, or {{ value = ..., sigma = ... }} for a prior (got {given!r})"
             )
-        priors[name] = Prior(float(value), float(sigma), _text(entry.get("from", ""), f"[model] fixed.{name}.from"))
+        priors[name] = Prior(
+            float(value), float(sigma), _text(entry.get("from", ""), f"[model] fixed.{name}.from")
+        )
     return priors
 
 

@@ -141,7 +141,7 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     """
     constants = model.constants
     k = np.array([item.k for item in constants])
-    l = np.array([item.l for item in constants])  # noqa: E741
+    l = np.array([item.l for item in constants])
     # 2v + 1 and J(J + 1) are whole numbers and their powers exact in 106 bits; the halves come out at the end.
     vibration = powers(exact(2 * v + 1.0), int(k.max()))
     rotation = powers(exact(j * (j + 1.0)), int(l.max()))

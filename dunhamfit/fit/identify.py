@@ -53,7 +53,9 @@ def check_rank(model: Model, r: np.ndarray) -> Rank:
     """
     free = [item for item, fixed in zip(model.parameters, model.fixed, strict=True) if not fixed]
     preference = {"term": 0, "breakdown": 1, "offset": 2, "scale": 2}
-    order = sorted(range(len(free)), key=lambda i: (preference[free[i].kind], free[i].k + free[i].l, free[i].k))
+    order = sorted(
+        range(len(free)), key=lambda i: (preference[free[i].kind], free[i].k + free[i].l, free[i].k)
+    )
     rank = judge(r, order)
     if not rank.dependent:
         return rank
@@ -86,14 +88,14 @@ def listed(names) -> str:
     return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
 
 
-def _free_constants(model: Model, l: int):  # noqa: E741
-    return [
-        item for item in model.constants if item.l == l and (model.prior(item) is None) and not item.atom
-    ]
+def _free_constants(model: Model, l: int):
+    return [item for item in model.constants if item.l == l and (model.prior(item) is None) and not item.atom]
 
 
 def _breakdown_without_isotopes(model: Model, lines: LineList, design: Design):
-    present = [model.isotopologue(lines.isotopologues[code]) for code in np.unique(design.groups.isotopologue)]
+    present = [
+        model.isotopologue(lines.isotopologues[code]) for code in np.unique(design.groups.isotopologue)
+    ]
     for atom in dict.fromkeys(item.atom for item in model.constants if item.atom):
         names = [item.name for item in model.constants if item.atom == atom and model.prior(item) is None]
         isotopes = {
@@ -106,7 +108,7 @@ def _breakdown_without_isotopes(model: Model, lines: LineList, design: Design):
             yield (
                 names,
                 f"{listed(names)}: every line has the same isotope {isotopes.pop()} of {atom}, and a breakdown "
-                f"term shows only in the difference between isotopes; add lines of an isotopologue with another "
+                "term shows only in the difference between isotopes; add lines of an isotopologue with another "
                 f"isotope of {atom}, or remove the breakdown terms of {atom}.",
             )
 
@@ -119,7 +121,9 @@ def _vibration_beyond_levels(model: Model, lines: LineList, design: Design):
         of_code = design.groups.isotopologue == code
         bands = {
             (int(upper), int(lower))
-            for upper, lower in zip(design.groups.v_upper[of_code], design.groups.v_lower[of_code], strict=True)
+            for upper, lower in zip(
+                design.groups.v_upper[of_code], design.groups.v_lower[of_code], strict=True
+            )
         }
         sets = _connected(bands)
         differences += sum(len(levels) - 1 for levels in sets)
@@ -129,7 +133,8 @@ def _vibration_beyond_levels(model: Model, lines: LineList, design: Design):
         return
     lost = [item.name for item in terms[differences:]]
     largest = f"at most {terms[differences - 1].name}" if differences else "no term with l = 0"
-    reason = f"the lines reach {len(reached)} vibrational {'level' if len(reached) == 1 else 'levels'} ({_ranges(reached)})"
+    levels = "level" if len(reached) == 1 else "levels"
+    reason = f"the lines reach {len(reached)} vibrational {levels} ({_ranges(reached)})"
     if floating:
         reason += f", and those of {_ranges(floating[0])} share no level with the rest"
     yield (
@@ -146,7 +151,7 @@ def _rotation_beyond_levels(model: Model, lines: LineList, design: Design):
     levels = set(zip(groups.isotopologue, groups.v_upper, strict=True))
     levels |= set(zip(groups.isotopologue, groups.v_lower, strict=True))
     reached = {int(v) for _, v in levels}
-    for l in sorted({item.l for item in model.constants if item.l}):  # noqa: E741
+    for l in sorted({item.l for item in model.constants if item.l}):
         terms = _free_constants(model, l)
         if len(terms) > len(levels):
             lost = [item.name for item in terms[len(levels) :]]
@@ -210,4 +215,6 @@ def _what_would_fix(parameters) -> str:
     for item in parameters:
         if item.source:
             advice.append(f"a stated uncertainty for the {item.kind} of source {item.source}")
-    return f"What would fix it: {' or '.join(advice)}; or remove {listed([item.name for item in parameters])}."
+    return (
+        f"What would fix it: {' or '.join(advice)}; or remove {listed([item.name for item in parameters])}."
+    )

@@ -42,7 +42,7 @@ class Parameter:
     kind: str
     unit: str
     k: int = -1
-    l: int = -1  # noqa: E741 - the field's own index
+    l: int = -1
     atom: str = ""
     source: str = ""
 
@@ -95,7 +95,9 @@ class Model:
         constants = {item.name for item in self.constants}
         for name in self.priors:
             if name not in constants:
-                raise UsageError(f"'{name}' is fixed but is not a term of the model ({', '.join(sorted(constants))})")
+                raise UsageError(
+                    f"'{name}' is fixed but is not a term of the model ({', '.join(sorted(constants))})"
+                )
 
     @cached_property
     def constants(self) -> tuple[Parameter, ...]:
@@ -154,7 +156,9 @@ class Model:
         return {}
 
 
-def _mass_factors(reference: Isotopologue, other: Isotopologue, constants: tuple[Parameter, ...]) -> np.ndarray:
+def _mass_factors(
+    reference: Isotopologue, other: Isotopologue, constants: tuple[Parameter, ...]
+) -> np.ndarray:
     rho = mass_ratio(reference, other)
     factors = np.empty((len(constants), 2))
     with localcontext(prec=DIGITS):

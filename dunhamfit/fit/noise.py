@@ -85,9 +85,7 @@ def estimate(policy: str, triangles: tuple[Triangle, ...], groups: Groups, lines
     label, names = _labels(check_policy(policy), groups, lines)
     count = len(groups)
     found = noise_factors(triangles[:count], labels=label, fixed=triangles[count:])
-    return Noise(
-        policy, names, label, found.factors, found.sigmas, found.degrees, found.determined
-    )
+    return Noise(policy, names, label, found.factors, found.sigmas, found.degrees, found.determined)
 
 
 def group_names(groups: Groups, lines: LineList) -> tuple[str, ...]:

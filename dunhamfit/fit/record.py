@@ -112,7 +112,7 @@ class Fit:
         """1 sigma of every parameter, shape (p,)."""
         return np.sqrt(np.einsum("ij,ij->i", self.factor, self.factor))
 
-    def index(self, k: int, l: int, atom: str = "") -> int:  # noqa: E741 - the field's own index
+    def index(self, k: int, l: int, atom: str = "") -> int:
         """Place of a term, or of a breakdown term where `atom` is given.
 
         Raises
@@ -124,13 +124,15 @@ class Fit:
             if (item.k, item.l, item.atom) == (k, l, atom):
                 return place
         wanted = f"d{k}{l}_{atom}" if atom else f"Y{k}{l}"
-        raise UsageError(f"{wanted} is not in this fit; it has {', '.join(item.name for item in self.constants)}")
+        raise UsageError(
+            f"{wanted} is not in this fit; it has {', '.join(item.name for item in self.constants)}"
+        )
 
-    def value(self, k: int, l: int, atom: str = "") -> float:  # noqa: E741
+    def value(self, k: int, l: int, atom: str = "") -> float:
         """Value of a term or breakdown term, cm-1."""
         return float(self.values[self.index(k, l, atom)])
 
-    def sigma(self, k: int, l: int, atom: str = "") -> float:  # noqa: E741
+    def sigma(self, k: int, l: int, atom: str = "") -> float:
         """1 sigma of a term or breakdown term, cm-1."""
         return float(self.sigmas[self.index(k, l, atom)])
 

@@ -7,6 +7,7 @@ from types import MappingProxyType
 
 import numpy as np
 
+from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.least_squares import Solution, first_triangle, refine, sharpened
 from dunhamfit.algebra.rank import Rank
 from dunhamfit.algebra.rows import Rows
@@ -26,7 +27,6 @@ from dunhamfit.molecule.terms import BreakdownTerm, TermSet, parse_indices
 _SHARPEN_ABOVE = 1e6
 # Outside these a noise factor is said in plain words.
 SMALL_FACTOR, LARGE_FACTOR = 0.5, 2.0
-LN_2_PI = float(np.log(2 * np.pi))
 
 
 def make_model(
@@ -60,7 +60,9 @@ def make_model(
         reference=Isotopologue.parse(reference, masses),
         terms=terms,
         breakdown=tuple(
-            BreakdownTerm(atom, *parse_indices(name)) for atom, names in (breakdown or {}).items() for name in names
+            BreakdownTerm(atom, *parse_indices(name))
+            for atom, names in (breakdown or {}).items()
+            for name in names
         ),
         calibration=tuple(s for s in calibrated if s.offset is not None or s.scale is not None),
         priors=MappingProxyType(dict(priors or {})),
@@ -95,9 +97,7 @@ def fit_lines(
     NotConverged
         If the noise factors or the refinement do not settle.
     """
-    model = make_model(
-        lines, terms, reference=reference, breakdown=breakdown, priors=priors, masses=masses
-    )
+    model = make_model(lines, terms, reference=reference, breakdown=breakdown, priors=priors, masses=masses)
     return fit_model(model, lines, policy=policy)
 
 
@@ -157,18 +157,18 @@ def _statistics(design: Design, rows: Rows, solution: Solution, rank: Rank, nois
     stated = solution.residuals.high * design.rows.scale
     chi2 = float(stated @ stated) + float(design.rows.spread.sum())
     dof = data - parameters
-    log_likelihood = -0.5 * (solution.chi2 + data * LN_2_PI) - float(rows.log_sigma.sum())
+    likelihood = log_likelihood(solution.chi2, data, float(rows.log_sigma.sum()))
     counted = parameters + len(noise.factors)
     return Statistics(
         lines=lines,
         parameters=parameters,
         dof=dof,
         chi2=chi2,
-        reduced_chi2=chi2 / dof if dof > 0 else float("nan"),
+        reduced_chi2=reduced_chi2(chi2, dof),
         condition=rank.condition,
-        log_likelihood=log_likelihood,
-        aicc=2 * counted - 2 * log_likelihood + 2 * counted * (counted + 1) / (data - counted - 1),
-        bic=counted * float(np.log(data)) - 2 * log_likelihood,
+        log_likelihood=likelihood,
+        aicc=aicc(likelihood, data, counted),
+        bic=bic(likelihood, data, counted),
     )
 
 
@@ -184,7 +184,11 @@ def _warnings(lines: LineList, design: Design, noise: Noise, rank: Rank) -> tupl
         if not known:
             texts.append(f"{name}: too few lines to tell a noise factor; the stated uncertainties are kept")
         elif factor > LARGE_FACTOR:
-            texts.append(f"{name}: the lines scatter {factor:.3g} times more than their stated uncertainties say")
+            texts.append(
+                f"{name}: the lines scatter {factor:.3g} times more than their stated uncertainties say"
+            )
         elif factor < SMALL_FACTOR:
-            texts.append(f"{name}: the lines scatter {1 / factor:.3g} times less than their stated uncertainties say")
+            texts.append(
+                f"{name}: the lines scatter {1 / factor:.3g} times less than their stated uncertainties say"
+            )
     return tuple(texts)

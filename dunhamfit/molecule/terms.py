@@ -29,7 +29,7 @@ class Term:
     """One coefficient Y_kl, in cm-1."""
 
     k: int
-    l: int  # noqa: E741 - the field's own index
+    l: int
 
     @property
     def name(self) -> str:
@@ -48,7 +48,7 @@ class BreakdownTerm:
 
     atom: str
     k: int
-    l: int  # noqa: E741
+    l: int
 
     @property
     def name(self) -> str:
@@ -59,7 +59,7 @@ class BreakdownTerm:
         return self.k + 2 * self.l
 
 
-def indices(k: int, l: int) -> str:  # noqa: E741
+def indices(k: int, l: int) -> str:
     """`10` for (1, 0); `10,0` for (10, 0)."""
     return f"{k}{l}" if k < 10 and l < 10 else f"{k},{l}"
 
@@ -74,10 +74,14 @@ def parse_indices(text: str) -> tuple[int, int]:
     """
     found = _NAME.fullmatch(text.strip())
     if not found:
-        raise UsageError(f"'{text}' is not a term; write Y and the two indices, such as Y21, or Y10,0 from index 10 on")
-    k, l = (int(part) for part in found.groups() if part is not None)  # noqa: E741
+        raise UsageError(
+            f"'{text}' is not a term; write Y and the two indices, such as Y21, or Y10,0 from index 10 on"
+        )
+    k, l = (int(part) for part in found.groups() if part is not None)
     if (k, l) == (0, 0):
-        raise UsageError("Y00 cannot be determined from transitions, since it drops out of every difference; remove it")
+        raise UsageError(
+            "Y00 cannot be determined from transitions, since it drops out of every difference; remove it"
+        )
     return k, l
 
 
@@ -106,7 +110,9 @@ class TermSet(tuple):
         """
         orders = list(orders)
         if not orders or any(not isinstance(k, int) or isinstance(k, bool) or k < -1 for k in orders):
-            raise UsageError(f"orders must be whole numbers, the highest k for l = 0, 1, 2, ... (got {orders})")
+            raise UsageError(
+                f"orders must be whole numbers, the highest k for l = 0, 1, 2, ... (got {orders})"
+            )
         return cls(Term(k, l) for l, top in enumerate(orders) for k in range(top + 1) if (k, l) != (0, 0))
 
     @classmethod
@@ -117,7 +123,9 @@ class TermSet(tuple):
     @property
     def orders(self) -> tuple[int, ...]:
         """Highest k for each l, -1 where there is none."""
-        return tuple(max((t.k for t in self if t.l == l), default=-1) for l in range(max(t.l for t in self) + 1))
+        return tuple(
+            max((t.k for t in self if t.l == l), default=-1) for l in range(max(t.l for t in self) + 1)
+        )
 
     @property
     def names(self) -> tuple[str, ...]:

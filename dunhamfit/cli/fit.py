@@ -1,0 +1,49 @@
+"""`dunhamfit fit JOB`: the global fit."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from dunhamfit.archive.store import open_archive
+from dunhamfit.cli.output import Output, json_option, quiet_option
+from dunhamfit.fit.record import Fit
+from dunhamfit.job import Job, fit_job, read_job, read_job_lines
+from dunhamfit.lines.faults import raise_faults
+from dunhamfit.show.documents import fit_document
+from dunhamfit.show.fit_report import fit_tables
+
+
+@click.command()
+@click.argument("job", type=click.Path(path_type=Path))
+@click.option(
+    "-o",
+    "archive",
+    metavar="ARCHIVE",
+    type=click.Path(dir_okay=False, path_type=Path),
+    help="Archive to append the run to; by default the one that the job names.",
+)
+@json_option
+@quiet_option
+def command(job: Path, archive: Path | None, as_json: bool, quiet: bool) -> None:
+    """Fit one set of constants to all lines of JOB and append the run to the archive."""
+    run_fit(read_job(job), archive, Output(as_json=as_json, quiet=quiet))
+
+
+def run_fit(job: Job, archive: Path | None, output: Output) -> Fit:
+    """Fit a job, store the run, hand over the result."""
+    reading = read_job_lines(job)
+    for notice in reading.notices:
+        output.warn(notice)
+    raise_faults(reading.faults, rows_fine=sum(len(item.lines) for item in reading.readings))
+    fit = fit_job(job, reading.lines)
+    path = archive or job.archive
+    with open_archive(path, mode="a") as store:
+        parent = store.latest_number()
+        run = store.save(fit, job_text=job.text, title=job.title, parent=parent, notices=reading.notices)
+    for text in fit.warnings:
+        output.warn(text)
+    output.result(fit_document(fit, run=run, parent=parent, notices=reading.notices), fit_tables(fit))
+    output.remark(f"run {run} stored in {path}")
+    return fit
