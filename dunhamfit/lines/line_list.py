@@ -1,4 +1,9 @@
-"""Assigned lines of one molecule, as columns. A LineList is never edited: exclusion is a mask with a reason."""
+"""Assigned lines of one molecule, as columns.
+
+A LineList is never edited: exclusion is a mask with a reason.
+"""
+
+# ruff: noqa: RUF009 (`_column` makes a dataclass field)
 
 from __future__ import annotations
 
