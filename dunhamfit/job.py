@@ -362,10 +362,8 @@ def _terms(given: object, named: list[str]) -> TermSet | None:
         raise UsageError(
             f'[model] terms must be a list such as [4, 3, 2] or ["Y10", "Y01"], or "auto" (got {given!r})'
         )
-    if all(isinstance(item, str) for item in given):
-        terms = TermSet.from_names(given)
-    else:
-        terms = TermSet.from_orders(given)
+    by_name = all(isinstance(item, str) for item in given)
+    terms = TermSet.from_names(given) if by_name else TermSet.from_orders(given)
     return TermSet([*terms, *(parse_indices(name) for name in named if name.startswith("Y"))])
 
 
