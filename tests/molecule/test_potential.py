@@ -92,12 +92,13 @@ def test_jacobian_is_the_derivative(orders):
     jacobian = dunham_jacobian(OMEGA, B, A, FULL, orders=orders)
     for column, at in enumerate(point):
         step = np.zeros_like(point)
-        step[column] = 1e-3 * abs(at)
-        # Fourth-order difference: error of the order step^4, or rounding/step, whichever is larger.
+        step[column] = 4e-4 * abs(at)
+        # Fourth-order difference. The step balances its error against rounding: Y70, whose terms
+        # cancel, keeps 4e-9 of its largest derivative.
         near, far = value(point + step) - value(point - step), value(point + 2 * step) - value(point - 2 * step)
         slope = (8 * near - far) / (12 * step[column])
         scale = np.abs(jacobian * point).max(axis=1) / abs(at)
-        assert np.all(np.abs(jacobian[:, column] - slope) < 1e-8 * scale)
+        assert np.all(np.abs(jacobian[:, column] - slope) < 3e-8 * scale)
 
 
 def test_scaling_of_both_energies_scales_every_coefficient(rng):
