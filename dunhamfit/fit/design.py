@@ -113,7 +113,15 @@ def calculate(model: Model, lines: LineList, values: np.ndarray) -> Extended:
     Returns
     -------
     Extended, shape (n_lines,)
+        NaN for lines of isotopologues that the model does not know; such lines are never used.
     """
+    known = np.array([model.knows(name) for name in lines.isotopologues], dtype=bool)[lines.isotopologue]
+    if not known.all():
+        total = Extended(np.full(len(lines), np.nan), np.zeros(len(lines)))
+        if known.any():
+            part = calculate(model, lines.subset(known), values)
+            total.high[known], total.low[known] = part.high, part.low
+        return total
     levels, upper, lower = _levels(lines, np.arange(len(lines)))
     constants = len(model.constants)
     energy = product_with(level_columns(model, lines.isotopologues, *levels), exact(values[:constants]))

@@ -14,7 +14,7 @@ import numpy as np
 
 from dunhamfit.errors import UsageError
 from dunhamfit.lines.line_list import Source
-from dunhamfit.molecule.isotopologue import DIGITS, Isotopologue, breakdown_factor, mass_ratio
+from dunhamfit.molecule.isotopologue import DIGITS, Isotopologue, breakdown_factor, check_same_molecule, mass_ratio
 from dunhamfit.molecule.masses import Masses
 from dunhamfit.molecule.terms import BreakdownTerm, Term, TermSet
 
@@ -140,6 +140,14 @@ class Model:
     def isotopologue(self, name: str) -> Isotopologue:
         """Another isotopologue of the molecule, by name."""
         return Isotopologue.parse(name, self.masses)
+
+    def knows(self, name: str) -> bool:
+        """Whether `name` is an isotopologue of this molecule; lines left out may bear any name."""
+        try:
+            check_same_molecule(self.reference, self.isotopologue(name))
+        except UsageError:
+            return False
+        return True
 
     def mass_factors(self, name: str) -> np.ndarray:
         """Factor of each constant in isotopologue `name`, shape (constants, 2): high and low part.
