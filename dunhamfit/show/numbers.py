@@ -20,9 +20,10 @@ from dunhamfit.errors import UsageError
 # that is asked for ever happens.
 _EXACT = Context(prec=700, rounding=ROUND_HALF_EVEN)
 
-# Numbers whose leading digit stands between 1e-4 and 1e15 (the last place a double keeps
-# whole) are written out, others with a power of ten.
-_WRITTEN_OUT = range(-4, 16)
+# Numbers whose leading digit stands between 1e-3 and 1e15 (the last place a double keeps
+# whole) are written out, others with a power of ten: residuals of one column, mostly smaller
+# than 1e-3 cm-1, then look alike.
+_WRITTEN_OUT = range(-3, 16)
 
 _VALUE_SIGMA = re.compile(
     r"(?P<value>[-+]?(?:\d+(?:\.(?P<decimals>\d*))?|\.(?P<bare_decimals>\d+)))"

@@ -24,8 +24,10 @@ from rich.text import Text
 from dunhamfit.show.escape import escape_controls
 
 _GAP = 2  # blanks between columns
-# A text column is not squeezed below its longest word, unless that word (a path, a hash) is longer than this.
-_LONGEST_WORD = 24
+# A text column is not squeezed below this, so that labels stay on one line and sentences wrap,
+_LABEL = 16
+# nor below its longest word, unless that word (a path, a hash) is longer than this.
+_WORD = 24
 # Notes are sentences; longer lines than this are hard to read however wide the terminal is.
 _NOTE_WIDTH = 100
 
@@ -174,11 +176,10 @@ def _block(column: Column, cells: Sequence[str]) -> _Block:
     words = [cell_len(word) for text in headings for word in text.split()]
     natural = max([widest, *(cell_len(text) for text in headings)])
     if column.align == "left":
-        words += [min(cell_len(word), _LONGEST_WORD) for cell in cells for word in cell.split()]
-        least = max(words, default=0)
-    else:
-        least = max([widest, *words])
-    return _Block(column, tuple(cells), min(least, natural), natural)
+        words += [min(cell_len(word), _WORD) for cell in cells for word in cell.split()]
+        widest = min(widest, _LABEL)
+    least = max([widest, *words])
+    return _Block(column, tuple(cells), least, natural)
 
 
 def _lined_up(cells: Sequence[str]) -> list[str]:

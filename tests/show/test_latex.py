@@ -40,8 +40,7 @@ SPECIAL = {
 def read_back(latex: str) -> str:
     """The characters that LaTeX would print, for text without mathematics; fails on a bare special one."""
     token = re.compile(
-        "|".join(re.escape(command) for command in sorted(SPECIAL, key=len, reverse=True))
-        + r"|[^#$%&_{}~^\\]"
+        "|".join(re.escape(command) for command in sorted(SPECIAL, key=len, reverse=True)) + r"|[^#$%&_{}~^\\]"
     )
     tokens = token.findall(latex)
     assert "".join(tokens) == latex, "a special character stands unescaped"
