@@ -9,7 +9,8 @@ import click
 
 from dunhamfit.cli.output import Output, json_option, quiet_option
 from dunhamfit.errors import InputFaults
-from dunhamfit.job import Job, JobReading, read_job, read_job_lines
+from dunhamfit.job.run import JobReading, read_job_lines
+from dunhamfit.job.tables import Job, read_job
 from dunhamfit.lines.closure import Closure, check_closure
 from dunhamfit.lines.faults import raise_faults
 from dunhamfit.lines.straight_line import look_at_bands

@@ -14,7 +14,7 @@ from dunhamfit.cli.fit import run_fit
 from dunhamfit.cli.output import Output, quiet_option
 from dunhamfit.errors import UsageError
 from dunhamfit.fit.record import Fit
-from dunhamfit.job import read_job
+from dunhamfit.job.tables import read_job
 from dunhamfit.show.numbers import format_value
 from dunhamfit.show.tables import Column, Table
 

@@ -9,7 +9,8 @@ import click
 from dunhamfit.archive.store import open_archive
 from dunhamfit.cli.output import Output, json_option, quiet_option
 from dunhamfit.fit.record import Fit
-from dunhamfit.job import Job, fit_job, read_job, read_job_lines
+from dunhamfit.job.run import fit_job, read_job_lines
+from dunhamfit.job.tables import Job, read_job
 from dunhamfit.lines.faults import raise_faults
 from dunhamfit.show.documents import fit_document
 from dunhamfit.show.fit_report import fit_tables

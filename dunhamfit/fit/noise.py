@@ -67,7 +67,9 @@ def as_stated(groups: Groups) -> Noise:
     return Noise("stated", (), np.zeros(len(groups), dtype=int), none, none, none, np.empty(0, dtype=bool))
 
 
-def estimate(policy: str, triangles: tuple[Triangle, ...], groups: Groups, lines: LineList) -> Noise:
+def estimate(
+    policy: str, triangles: tuple[Triangle, ...], groups: Groups, lines: LineList
+) -> tuple[Noise, np.ndarray]:
     """Noise factors by restricted maximum likelihood.
 
     Parameters
@@ -78,14 +80,23 @@ def estimate(policy: str, triangles: tuple[Triangle, ...], groups: Groups, lines
     groups : Groups
     lines : LineList
 
+    Returns
+    -------
+    Noise
+    ndarray of float, shape (free, free)
+        What the covariance of the parameters gains because the factors are themselves estimated.
+
     Raises
     ------
     NotConverged
     """
     label, names = _labels(check_policy(policy), groups, lines)
     count = len(groups)
-    found = noise_factors(triangles[:count], labels=label, fixed=triangles[count:])
-    return Noise(policy, names, label, found.factors, found.sigmas, found.degrees, found.determined)
+    # One common factor multiplies everything alike: it is told by as little as one degree of freedom.
+    least = {"least_degrees": 1.0} if policy == "common" else {}
+    found = noise_factors(triangles[:count], labels=label, fixed=triangles[count:], **least)
+    noise = Noise(policy, names, label, found.factors, found.sigmas, found.degrees, found.determined)
+    return noise, found.allowance
 
 
 def group_names(groups: Groups, lines: LineList) -> tuple[str, ...]:

@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from types import MappingProxyType
 
 import numpy as np
+from scipy.linalg import cholesky
 
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.least_squares import Solution, first_triangle, refine, sharpened
@@ -112,14 +113,13 @@ def fit_model(model: Model, lines: LineList, *, policy: str = "stated") -> Fit:
     start = first_triangle(rows)
     rank = check_rank(model, start.r)
     solution = refine(rows, start.r, solve(start))
-    if policy == "stated":
-        noise = as_stated(design.groups)
-    else:
-        noise = estimate(policy, rows.triangles(solution.values), design.groups, lines)
+    noise, allowance = as_stated(design.groups), None
+    if policy != "stated":
+        noise, allowance = estimate(policy, rows.triangles(solution.values), design.groups, lines)
         rows = rows.reweighted(_row_factors(noise, rows))
         solution = refine(rows, first_triangle(rows).r, solution.values)
     factor = np.zeros((len(given), len(free)))
-    factor[free] = _factor(rows, solution, rank)
+    factor[free] = _factor(rows, solution, rank, allowance)
     values = given
     values[free] = solution.values
     return Fit(
@@ -147,9 +147,13 @@ def _row_factors(noise: Noise, rows: Rows) -> np.ndarray:
     return factors
 
 
-def _factor(rows: Rows, solution: Solution, rank: Rank) -> np.ndarray:
+def _factor(rows: Rows, solution: Solution, rank: Rank, allowance: np.ndarray | None) -> np.ndarray:
+    """F with covariance F F^T, the allowance for estimated noise factors included."""
     r = sharpened(rows, solution.r) if rank.condition > _SHARPEN_ABOVE else solution.r
-    return covariance_factor(r)
+    factor = covariance_factor(r)
+    if allowance is None:
+        return factor
+    return factor @ cholesky(np.eye(len(r)) + r @ allowance @ r.T, lower=True)
 
 
 def _statistics(design: Design, rows: Rows, solution: Solution, rank: Rank, noise: Noise) -> Statistics:

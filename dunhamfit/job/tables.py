@@ -1,4 +1,4 @@
-"""The job file (TOML): what to read, what to fit, which errors to believe."""
+"""The job file (TOML): what to read, what to fit, which errors to believe; checked key by key."""
 
 from __future__ import annotations
 
@@ -6,22 +6,15 @@ import difflib
 import math
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from types import MappingProxyType
 
-import numpy as np
-
-from dunhamfit.errors import InputFaults, UsageError
-from dunhamfit.fit.model import Model, Prior
+from dunhamfit.errors import UsageError
+from dunhamfit.fit.model import Prior
 from dunhamfit.fit.noise import check_policy
-from dunhamfit.fit.record import Fit
-from dunhamfit.fit.solve import fit_model, make_model
-from dunhamfit.lines.faults import Fault, raise_faults
-from dunhamfit.lines.line_list import LineList, merge
-from dunhamfit.lines.reading import Reading, read_source
 from dunhamfit.lines.request import SourceRequest
-from dunhamfit.molecule.isotopologue import Isotopologue, check_same_molecule
+from dunhamfit.molecule.isotopologue import Isotopologue
 from dunhamfit.molecule.masses import Masses
 from dunhamfit.molecule.terms import TermSet, parse_indices
 
@@ -104,26 +97,6 @@ class Job:
     robust: str
 
 
-@dataclass(frozen=True, eq=False)
-class JobReading:
-    """What reading all sources of a job gave.
-
-    Attributes
-    ----------
-    lines : LineList or None
-        None if there are faults.
-    readings : tuple of Reading
-        One a source, in the order of the job.
-    faults : tuple of Fault
-    notices : tuple of str
-    """
-
-    lines: LineList | None
-    readings: tuple[Reading, ...]
-    faults: tuple[Fault, ...]
-    notices: tuple[str, ...] = field(default=())
-
-
 def read_job(path: str | Path) -> Job:
     """Read and check a job file.
 
@@ -153,60 +126,6 @@ def parse_job(text: str, path: Path) -> Job:
         return _job(tables, text, path)
     except UsageError as error:
         raise UsageError(f"{path}: {error}") from None
-
-
-def read_job_lines(job: Job) -> JobReading:
-    """Read every source of a job; faults of all sources are returned together, not raised."""
-    reference = Isotopologue.parse(job.reference, job.masses)
-
-    def check(name: str) -> str:
-        other = Isotopologue.parse(name, job.masses)
-        check_same_molecule(reference, other)
-        return other.name
-
-    readings = tuple(read_source(request, check_isotopologue=check) for request in job.sources)
-    faults = [fault for reading in readings for fault in reading.faults]
-    faults += _listed_twice(job.sources)
-    notices = tuple(notice for reading in readings for notice in reading.notices)
-    if faults:
-        return JobReading(None, readings, tuple(faults), notices)
-    lines = merge([reading.lines for reading in readings])
-    for exclusion in job.exclusions:
-        lines = lines.excluded(_excluded_rows(lines, exclusion), exclusion.reason)
-    return JobReading(lines, readings, (), notices)
-
-
-def job_lines(job: Job) -> LineList:
-    """The lines of a job.
-
-    Raises
-    ------
-    InputFaults
-        With the faults of every source.
-    """
-    reading = read_job_lines(job)
-    if reading.lines is None:
-        raise_faults(reading.faults, rows_fine=sum(len(item.lines) for item in reading.readings))
-        raise InputFaults(reading.faults)
-    return reading.lines
-
-
-def job_model(job: Job, lines: LineList) -> Model:
-    """The model that a job asks for."""
-    return make_model(
-        lines,
-        job.terms,
-        reference=job.reference,
-        breakdown=job.breakdown,
-        priors=job.priors,
-        masses=job.masses,
-    )
-
-
-def fit_job(job: Job, lines: LineList | None = None) -> Fit:
-    """Read the lines of a job, unless they are given, and fit its model to them."""
-    lines = job_lines(job) if lines is None else lines
-    return fit_model(job_model(job, lines), lines, policy=job.policy)
 
 
 def _job(tables: Mapping, text: str, path: Path) -> Job:
@@ -336,32 +255,12 @@ def _exclusions(tables: object, sources: tuple[SourceRequest, ...]) -> tuple[Exc
     return tuple(exclusions)
 
 
-def _excluded_rows(lines: LineList, exclusion: Exclusion) -> np.ndarray:
-    code = next(i for i, source in enumerate(lines.sources) if source.name == exclusion.source)
-    files = lines.sources[code].files
-    mask = (lines.source == code) & np.isin(lines.row, exclusion.rows)
-    if exclusion.file or len(files) > 1:
-        if exclusion.file not in files:
-            raise UsageError(
-                f"exclude: source '{exclusion.source}' has several files; name one of {', '.join(files)}"
-            )
-        mask &= lines.file == files.index(exclusion.file)
-    missing = sorted(set(exclusion.rows) - set(lines.row[mask].tolist()))
-    if missing:
-        raise UsageError(
-            f"exclude: source '{exclusion.source}' has no line on row {', '.join(map(str, missing))} of its file"
-        )
-    return mask
-
-
 def _terms(given: object, named: list[str]) -> TermSet | None:
     """The terms of the model; those that are fixed or related by name belong to it as well."""
     if given == "auto":
         return None
     if not isinstance(given, list) or not given:
-        raise UsageError(
-            f'[model] terms must be a list such as [4, 3, 2] or ["Y10", "Y01"], or "auto" (got {given!r})'
-        )
+        raise UsageError(f'[model] terms must be a list such as [4, 3, 2] or ["Y10", "Y01"], or "auto" (got {given!r})')
     by_name = all(isinstance(item, str) for item in given)
     terms = TermSet.from_names(given) if by_name else TermSet.from_orders(given)
     return TermSet([*terms, *(parse_indices(name) for name in named if name.startswith("Y"))])
@@ -372,9 +271,7 @@ def _breakdown(table: object) -> Mapping[str, tuple[str, ...]]:
         raise UsageError('[model] breakdown must be a table, such as breakdown = { Si = ["10", "01"] }')
     for atom, names in table.items():
         if not isinstance(names, list) or not all(isinstance(name, str) for name in names):
-            raise UsageError(
-                f'[model] breakdown: {atom} needs a list of terms, such as ["10", "01"] (got {names!r})'
-            )
+            raise UsageError(f'[model] breakdown: {atom} needs a list of terms, such as ["10", "01"] (got {names!r})')
     return MappingProxyType({atom: tuple(names) for atom, names in table.items()})
 
 
@@ -390,9 +287,7 @@ def _priors(table: object) -> dict[str, Prior]:
             raise UsageError(
                 f"[model] fixed.{name} must be a value, or {{ value = ..., sigma = ... }} for a prior (got {given!r})"
             )
-        priors[name] = Prior(
-            float(value), float(sigma), _text(entry.get("from", ""), f"[model] fixed.{name}.from")
-        )
+        priors[name] = Prior(float(value), float(sigma), _text(entry.get("from", ""), f"[model] fixed.{name}.from"))
     return priors
 
 
@@ -404,23 +299,3 @@ def _potential(order: object) -> int:
     if type(order) is not int or order < 0:
         raise UsageError(f"[model] potential must be a whole number, the highest a_N (got {order!r})")
     return order
-
-
-def _listed_twice(sources: tuple[SourceRequest, ...]) -> list[Fault]:
-    """Files that two sources name; twice in one source is found while reading it."""
-    owner: dict[Path, str] = {}
-    faults = []
-    for request in sources:
-        for path, shown in zip(request.files, request.shown, strict=True):
-            first = owner.setdefault(path.resolve(), request.name)
-            if first != request.name:
-                faults.append(
-                    Fault(
-                        shown,
-                        0,
-                        "the file is listed twice",
-                        f'sources "{first}" and "{request.name}" both name it and its lines would count double',
-                        "remove it from one of them",
-                    )
-                )
-    return faults

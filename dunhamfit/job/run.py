@@ -1,0 +1,129 @@
+"""A job carried out: its sources read, its model made and fitted."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from pathlib import Path
+
+import numpy as np
+
+from dunhamfit.errors import InputFaults, UsageError
+from dunhamfit.fit.model import Model
+from dunhamfit.fit.record import Fit
+from dunhamfit.fit.solve import fit_model, make_model
+from dunhamfit.job.tables import Exclusion, Job
+from dunhamfit.lines.faults import Fault, raise_faults
+from dunhamfit.lines.line_list import LineList, merge
+from dunhamfit.lines.reading import Reading, read_source
+from dunhamfit.lines.request import SourceRequest
+from dunhamfit.molecule.isotopologue import Isotopologue, check_same_molecule
+
+
+@dataclass(frozen=True, eq=False)
+class JobReading:
+    """What reading all sources of a job gave.
+
+    Attributes
+    ----------
+    lines : LineList or None
+        None if there are faults.
+    readings : tuple of Reading
+        One a source, in the order of the job.
+    faults : tuple of Fault
+    notices : tuple of str
+    """
+
+    lines: LineList | None
+    readings: tuple[Reading, ...]
+    faults: tuple[Fault, ...]
+    notices: tuple[str, ...] = field(default=())
+
+
+def read_job_lines(job: Job) -> JobReading:
+    """Read every source of a job; faults of all sources are returned together, not raised."""
+    reference = Isotopologue.parse(job.reference, job.masses)
+
+    def check(name: str) -> str:
+        other = Isotopologue.parse(name, job.masses)
+        check_same_molecule(reference, other)
+        return other.name
+
+    readings = tuple(read_source(request, check_isotopologue=check) for request in job.sources)
+    faults = [fault for reading in readings for fault in reading.faults]
+    faults += _listed_twice(job.sources)
+    notices = tuple(notice for reading in readings for notice in reading.notices)
+    if faults:
+        return JobReading(None, readings, tuple(faults), notices)
+    lines = merge([reading.lines for reading in readings])
+    for exclusion in job.exclusions:
+        lines = lines.excluded(_excluded_rows(lines, exclusion), exclusion.reason)
+    return JobReading(lines, readings, (), notices)
+
+
+def job_lines(job: Job) -> LineList:
+    """The lines of a job.
+
+    Raises
+    ------
+    InputFaults
+        With the faults of every source.
+    """
+    reading = read_job_lines(job)
+    if reading.lines is None:
+        raise_faults(reading.faults, rows_fine=sum(len(item.lines) for item in reading.readings))
+        raise InputFaults(reading.faults)
+    return reading.lines
+
+
+def job_model(job: Job, lines: LineList) -> Model:
+    """The model that a job asks for."""
+    return make_model(
+        lines,
+        job.terms,
+        reference=job.reference,
+        breakdown=job.breakdown,
+        priors=job.priors,
+        masses=job.masses,
+    )
+
+
+def fit_job(job: Job, lines: LineList | None = None) -> Fit:
+    """Read the lines of a job, unless they are given, and fit its model to them."""
+    lines = job_lines(job) if lines is None else lines
+    return fit_model(job_model(job, lines), lines, policy=job.policy)
+
+
+def _excluded_rows(lines: LineList, exclusion: Exclusion) -> np.ndarray:
+    code = next(i for i, source in enumerate(lines.sources) if source.name == exclusion.source)
+    files = lines.sources[code].files
+    mask = (lines.source == code) & np.isin(lines.row, exclusion.rows)
+    if exclusion.file or len(files) > 1:
+        if exclusion.file not in files:
+            raise UsageError(f"exclude: source '{exclusion.source}' has several files; name one of {', '.join(files)}")
+        mask &= lines.file == files.index(exclusion.file)
+    missing = sorted(set(exclusion.rows) - set(lines.row[mask].tolist()))
+    if missing:
+        raise UsageError(
+            f"exclude: source '{exclusion.source}' has no line on row {', '.join(map(str, missing))} of its file"
+        )
+    return mask
+
+
+def _listed_twice(sources: tuple[SourceRequest, ...]) -> list[Fault]:
+    """Files that two sources name; twice in one source is found while reading it."""
+    owner: dict[Path, str] = {}
+    faults = []
+    for request in sources:
+        for path, shown in zip(request.files, request.shown, strict=True):
+            first = owner.setdefault(path.resolve(), request.name)
+            if first != request.name:
+                faults.append(
+                    Fault(
+                        shown,
+                        0,
+                        "the file is listed twice",
+                        f'sources "{first}" and "{request.name}" both name it and its lines would count double',
+                        "remove it from one of them",
+                    )
+                )
+    return faults
