@@ -29,7 +29,7 @@ class Extended(NamedTuple):
         return self.high.shape
 
     @property
-    def T(self) -> Extended:  # noqa: N802 - numpy's own name for it
+    def T(self) -> Extended:
         return Extended(self.high.T, self.low.T)
 
     def take(self, index, axis: int = -1) -> Extended:
@@ -78,16 +78,15 @@ def two_product(a, b) -> Extended:
 
 
 def add(a: Extended, b: Extended) -> Extended:
-    """a + b; relative error about 2^-104 unless the sum cancels."""
+    """a + b; error about 2^-104 of |a| + |b|, as that of its operands."""
     total, error = two_sum(a.high, b.high)
-    tail, tail_error = two_sum(a.low, b.low)
-    total, error = _fast_two_sum(total, error + tail)
-    return _fast_two_sum(total, error + tail_error)
+    return _fast_two_sum(total, error + (a.low + b.low))
 
 
 def subtract(a: Extended, b: Extended) -> Extended:
-    """a - b."""
-    return add(a, Extended(-b.high, -b.low))
+    """a - b; error as that of `add`."""
+    total, error = two_sum(a.high, -b.high)
+    return _fast_two_sum(total, error + (a.low - b.low))
 
 
 def multiply(a: Extended, b: Extended) -> Extended:
@@ -98,12 +97,14 @@ def multiply(a: Extended, b: Extended) -> Extended:
     return _fast_two_sum(product, error + (a.high * b.low + a.low * b.high))
 
 
-def powers(base: Extended, highest: int) -> list[Extended]:
-    """base^0 ... base^highest."""
-    table = [exact(np.ones_like(base.high))]
-    for _ in range(highest):
-        table.append(multiply(table[-1], base))
-    return table
+def powers(base: Extended, highest: int) -> Extended:
+    """base^0 ... base^highest, shape (highest + 1, ...)."""
+    table = exact(np.stack([np.ones_like(base.high), base.high]))
+    table.low[1] = base.low
+    while len(table.high) <= highest:  # each round doubles the highest power
+        more = multiply(Extended(table.high[1:], table.low[1:]), Extended(table.high[-1], table.low[-1]))
+        table = Extended(np.concatenate([table.high, more.high]), np.concatenate([table.low, more.low]))
+    return Extended(table.high[: highest + 1], table.low[: highest + 1])
 
 
 def product_with(matrix: Extended, vector: Extended) -> Extended:

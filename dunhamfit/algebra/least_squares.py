@@ -20,7 +20,7 @@ from scipy.linalg import cholesky
 from scipy.linalg.lapack import dtrtrs
 
 from dunhamfit.algebra.extended import Extended
-from dunhamfit.algebra.rows import Rows, weighted
+from dunhamfit.algebra.rows import Rows
 from dunhamfit.algebra.triangle import Triangle, covariance_factor, reduce_rows
 from dunhamfit.errors import NotConverged
 
@@ -84,7 +84,7 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
     last = np.inf
     for _ in range(_ROUNDS):
         residual = rows.residuals(values)
-        gradient = rows.slices.gradient(weighted(residual, rows.scale))
+        gradient = rows.gradient(residual)
         half = dtrtrs(r, gradient, trans=1)[0]
         step = dtrtrs(r, half)[0]
         size = float(np.sqrt(half @ half))  # length of the step in units of sigma

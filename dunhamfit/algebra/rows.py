@@ -1,19 +1,17 @@
 """Rows of a linear least-squares problem, held so that residuals can be had to twice the precision.
 
-The exact product A x is needed because positions are up to 1e9 times their sigma. Each
-column is cut into fixed-point slices so narrow that products and sums of two slices
-are exact in float64, which leaves the work to matrix multiplication
-(K. Ozaki, T. Ogita, S. Oishi and S. M. Rump, Numer. Algorithms 59, 95 (2012)).
+The exact product A x is needed because positions are up to 1e9 times their sigma.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
 
-from dunhamfit.algebra.extended import Extended, exact, two_product, two_sum
+from dunhamfit.algebra.extended import Extended, exact, two_product
+from dunhamfit.algebra.slices import Slices
 from dunhamfit.algebra.triangle import Triangle, reduce_rows
 
 
@@ -23,7 +21,7 @@ class Rows:
 
     Attributes
     ----------
-    matrix : Extended, shape (p, n)
+    matrix : Slices, shape (p, n)
         One column of the design for each first index.
     observed : Extended, shape (n,)
     scale : ndarray of float, shape (n,)
@@ -38,7 +36,7 @@ class Rows:
         Sum of ln(sigma) over the lines of each group.
     """
 
-    matrix: Extended
+    matrix: Slices
     observed: Extended
     scale: np.ndarray
     starts: np.ndarray
@@ -48,16 +46,12 @@ class Rows:
 
     @property
     def parameters(self) -> int:
-        return self.matrix.high.shape[0]
-
-    @cached_property
-    def slices(self) -> _Slices:
-        return _Slices(self.matrix)
+        return self.matrix.shape[0]
 
     @cached_property
     def whitened(self) -> np.ndarray:
         """Design rows divided by sigma, shape (n, p)."""
-        return (self.matrix.high * self.scale).T
+        return (self.matrix.rounded * self.scale).T
 
     def residuals(self, values: np.ndarray) -> Extended:
         """y - A x to some 30 digits, shape (n,).
@@ -66,13 +60,15 @@ class Rows:
         ----------
         values : ndarray of float, shape (p,)
         """
-        return self.slices.residual(self.observed, values)
+        return self.matrix.less_product(self.observed, values)
 
     def product(self, values: np.ndarray) -> Extended:
         """A x to some 30 digits, shape (n,)."""
-        zero = np.zeros_like(self.scale)
-        negative = self.slices.residual(Extended(zero, zero), values)
-        return Extended(-negative.high, -negative.low)
+        return self.matrix.less_product(exact(np.zeros_like(self.scale)), -values)
+
+    def gradient(self, residual: Extended) -> np.ndarray:
+        """A^T W r for the residuals r, W = 1 / sigma^2, to well beyond double precision, shape (p,)."""
+        return self.matrix.product_with(_weighted(residual, self.scale))
 
     def held(self, columns, values) -> Rows:
         """The rows of the model in which `columns` are fixed at `values` and taken to the left side."""
@@ -80,22 +76,16 @@ class Rows:
         fixed = np.zeros(self.parameters)
         fixed[columns] = values
         free = np.setdiff1d(np.arange(self.parameters), columns)
-        matrix = Extended(self.matrix.high[free], self.matrix.low[free])
-        return Rows(
-            matrix, self.residuals(fixed), self.scale, self.starts, self.lines, self.spread, self.log_sigma
-        )
+        return replace(self, matrix=self.matrix.chosen(free), observed=self.residuals(fixed))
 
     def reweighted(self, factors: np.ndarray) -> Rows:
         """The rows with every sigma of group g multiplied by `factors[g]`."""
         each = np.repeat(1.0 / factors, np.diff(self.starts))
-        return Rows(
-            self.matrix,
-            self.observed,
-            self.scale * each,
-            self.starts,
-            self.lines,
-            self.spread / factors**2,
-            self.log_sigma + self.lines * np.log(factors),
+        return replace(
+            self,
+            scale=self.scale * each,
+            spread=self.spread / factors**2,
+            log_sigma=self.log_sigma + self.lines * np.log(factors),
         )
 
     def triangles(self, base: np.ndarray) -> tuple[Triangle, ...]:
@@ -120,7 +110,7 @@ def plain_rows(matrix, observed, sigma=None) -> Rows:
     Parameters
     ----------
     matrix : ndarray of float, shape (n, p), or Extended of that shape
-    observed : ndarray of float, shape (n,)
+    observed : ndarray of float, shape (n,), or Extended of that shape
     sigma : ndarray of float, shape (n,), optional
         1 sigma of each; 1 if not given.
     """
@@ -128,8 +118,8 @@ def plain_rows(matrix, observed, sigma=None) -> Rows:
     count = len(matrix.high)
     sigma = np.ones(count) if sigma is None else np.asarray(sigma, dtype=float)
     return Rows(
-        matrix=Extended(np.ascontiguousarray(matrix.high.T), np.ascontiguousarray(matrix.low.T)),
-        observed=exact(observed),
+        matrix=Slices.of(matrix.T),
+        observed=observed if isinstance(observed, Extended) else exact(observed),
         scale=1.0 / sigma,
         starts=np.array([0, count]),
         lines=np.array([count]),
@@ -138,57 +128,7 @@ def plain_rows(matrix, observed, sigma=None) -> Rows:
     )
 
 
-class _Slices:
-    """A matrix of shape (p, n) cut into two exact fixed-point slices and the rest."""
-
-    def __init__(self, matrix: Extended):
-        self.bits = (53 - int(np.ceil(np.log2(max(*matrix.high.shape, 2))))) // 2
-        largest = np.abs(matrix.high).max(axis=1, initial=0.0)
-        # Dividing by a power of two above the largest entry is exact and bounds every column by 1.
-        self.exponent = np.where(largest > 0, np.frexp(largest)[1], 0)
-        self.parts = _cut(
-            np.ldexp(matrix.high, -self.exponent[:, None]), np.ldexp(matrix.low, -self.exponent[:, None]), self.bits
-        )
-
-    def residual(self, observed: Extended, values: np.ndarray) -> Extended:
-        scaled = np.ldexp(values, self.exponent)
-        exponent = int(np.frexp(np.abs(scaled).max(initial=1e-300))[1])
-        pieces = np.stack(_cut(np.ldexp(scaled, -exponent), np.zeros_like(scaled), self.bits))
-        first, second, third = (pieces @ part for part in self.parts)  # [i][j]: slice i of A, piece j of x
-        total, error = two_sum(observed.high, -np.ldexp(first[0], exponent))
-        for product in (first[1], second[0]):
-            total, more = two_sum(total, -np.ldexp(product, exponent))
-            error = error + more
-        small = first[2] + second[1] + third[0] + second[2] + third[1]
-        return two_sum(total, error + (observed.low - np.ldexp(small, exponent)))
-
-    def gradient(self, weights: Extended) -> np.ndarray:
-        """A^T u to well beyond double precision before the last rounding, shape (p,)."""
-        largest = np.abs(weights.high).max(initial=0.0)
-        if largest == 0.0:
-            return np.zeros(len(self.exponent))
-        exponent = int(np.frexp(largest)[1])
-        pieces = np.stack(
-            _cut(np.ldexp(weights.high, -exponent), np.ldexp(weights.low, -exponent), self.bits), axis=1
-        )
-        first, second, third = (part @ pieces for part in self.parts)
-        total, error = two_sum(first[:, 0], first[:, 1])
-        total, more = two_sum(total, second[:, 0])
-        rest = first[:, 2] + second[:, 1] + third[:, 0] + second[:, 2] + third[:, 1]
-        return np.ldexp(total + (error + more + rest), self.exponent + exponent)
-
-
-def _cut(high: np.ndarray, low: np.ndarray, bits: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Cut numbers of size up to 1 into two slices of `bits` bits each and the rest."""
-    first_unit = 1.5 * 2.0 ** (52 - bits)
-    second_unit = 1.5 * 2.0 ** (52 - 2 * bits)
-    first = (high + first_unit) - first_unit
-    rest = high - first
-    second = (rest + second_unit) - second_unit
-    return first, second, (rest - second) + low
-
-
-def weighted(residual: Extended, scale: np.ndarray) -> Extended:
+def _weighted(residual: Extended, scale: np.ndarray) -> Extended:
     """residual * scale^2, keeping the low part, shape (n,)."""
     once = two_product(residual.high, scale)
     once_low = once.low + residual.low * scale

@@ -14,6 +14,7 @@ import numpy as np
 
 from dunhamfit.algebra.extended import Extended, exact, multiply, powers, product_with, subtract, two_sum
 from dunhamfit.algebra.rows import Rows
+from dunhamfit.algebra.slices import Slices, beside
 from dunhamfit.errors import CannotDetermine
 from dunhamfit.fit.model import Model
 from dunhamfit.lines.line_list import LineList
@@ -153,7 +154,7 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     # 2v + 1 and J(J + 1) are whole numbers and their powers exact in 106 bits; the halves come out at the end.
     vibration = powers(exact(2 * v + 1.0), int(k.max()))
     rotation = powers(exact(j * (j + 1.0)), int(l.max()))
-    product = multiply(_stack(vibration, k), _stack(rotation, l))
+    product = multiply(vibration.take(k, axis=0), rotation.take(l, axis=0))
     halves = np.ldexp(1.0, -k)[:, None]
     product = Extended(product.high * halves, product.low * halves)
     present = np.flatnonzero(np.bincount(code, minlength=len(isotopologues)))
@@ -164,12 +165,6 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
         return product
     factors = factors[:, :, code]
     return multiply(product, Extended(factors[:, 0], factors[:, 1]))
-
-
-def _stack(table: list[Extended], index: np.ndarray) -> Extended:
-    high = np.stack([entry.high for entry in table])
-    low = np.stack([entry.low for entry in table])
-    return Extended(high[index], low[index])
 
 
 def _group(lines: LineList, used: np.ndarray) -> tuple[Groups, np.ndarray]:
@@ -242,17 +237,19 @@ def _levels(lines: LineList, chosen: np.ndarray):
     return (code, v, j), number[: len(chosen)], number[len(chosen) :]
 
 
-def _columns(model: Model, lines: LineList, leading: np.ndarray, observed: np.ndarray) -> Extended:
+def _columns(model: Model, lines: LineList, leading: np.ndarray, observed: np.ndarray) -> Slices:
     """Design columns of the lines `leading`, shape (p, rows)."""
     levels, upper, lower = _levels(lines, leading)
     table = level_columns(model, lines.isotopologues, *levels)
-    constants = subtract(table.take(upper), table.take(lower))
+    # Room for the rows of priors, and slices of one width for what is joined below.
+    longest = max(*table.shape, len(leading) + len(model.parameters))
+    constants = Slices.of(table, longest).difference(upper, lower)
     calibration = model.parameters[len(model.constants) :]
     if not calibration:
         return constants
     # The scale multiplies the observed position: the difference from the true one is of second order.
     extra = np.stack([_calibration_column(item, lines, leading, observed) for item in calibration])
-    return Extended(np.concatenate([constants.high, extra]), np.concatenate([constants.low, np.zeros_like(extra)]))
+    return beside(constants, Slices.of(exact(extra), longest))
 
 
 def _calibration_column(parameter, lines: LineList, chosen, position: np.ndarray) -> np.ndarray:
@@ -271,10 +268,7 @@ def _with_priors(model: Model, rows: Rows) -> Rows:
     value = np.array([prior.value for _, prior in priors])
     sigma = np.array([prior.sigma for _, prior in priors])
     return Rows(
-        matrix=Extended(
-            np.concatenate([rows.matrix.high, extra], axis=1),
-            np.concatenate([rows.matrix.low, np.zeros_like(extra)], axis=1),
-        ),
+        matrix=rows.matrix.and_columns(extra),
         observed=Extended(
             np.concatenate([rows.observed.high, value]),
             np.concatenate([rows.observed.low, np.zeros_like(value)]),
