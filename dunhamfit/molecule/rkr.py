@@ -29,8 +29,9 @@ from numpy.polynomial.polynomial import polyval
 from dunhamfit.errors import NotConverged, UsageError
 from dunhamfit.molecule.potential import ROTATION_FACTOR
 
-# Relative change between two rules below which the longer one is taken; rounding of G comes near 1e-12.
-_AGREEMENT = 1e-11
+# Relative change between two rules below which the longer one is taken. The rules gain so fast that the
+# longer one is far better than this; rounding in a G(v) that cancels can come near 1e-11.
+_AGREEMENT = 1e-10
 _RULES = (12, 24, 48, 96, 192)
 
 

@@ -35,7 +35,7 @@ def test_kratzer_turning_points(shared_reference):
     points = turning_points(
         [row["v"] for row in rows], kratzer_energy, kratzer_rotation, mu=ROTATION_FACTOR
     )
-    # The table has 15 digits; the quadrature is asked for 1e-11 and reaches 1e-13.
+    # The table has 15 digits; the quadrature is asked for 1e-10 and reaches 1e-13.
     assert points.energy == pytest.approx([float(row["G"]) for row in rows], rel=1e-14)
     assert points.r_min == pytest.approx([float(row["rmin"]) for row in rows], rel=1e-12)
     assert points.r_max == pytest.approx([float(row["rmax"]) for row in rows], rel=1e-12)
