@@ -20,11 +20,13 @@ from abc import ABC, abstractmethod
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.special import gammaln, ndtr
 
 from dunhamfit.errors import UsageError
 
 # Normal means by the trapezoidal rule: exact to rounding for smooth functions, to 1e-6 with kinks.
 _GRID = np.linspace(-10.0, 10.0, 4001)
+_LOG_ROOT_2PI = float(np.log(2 * np.pi)) / 2
 _NORMAL = np.exp(-(_GRID**2) / 2) * (_GRID[1] - _GRID[0]) / np.sqrt(2 * np.pi)
 
 
@@ -48,15 +50,29 @@ class Loss(ABC):
         """Derivative of `rho`."""
         return self.weight(u) * u
 
+    @abstractmethod
+    def slope(self, u) -> np.ndarray:
+        """Derivative of `psi`; negative where the influence of a line falls with its size."""
+
+    @property
+    @abstractmethod
+    def log_norm(self) -> float:
+        """ln of the integral of exp(-rho): what makes exp(-rho) the density of an error model."""
+
     @property
     def consistency(self) -> float:
         """E[psi(u) u] for standard normal u, which equals E[psi'(u)]."""
         return float(_NORMAL @ (self.psi(_GRID) * _GRID))
 
     @property
+    def mean_square(self) -> float:
+        """E[psi(u)^2] for standard normal u."""
+        return float(_NORMAL @ self.psi(_GRID) ** 2)
+
+    @property
     def efficiency(self) -> float:
         """Asymptotic efficiency against least squares where the noise is normal."""
-        return self.consistency**2 / float(_NORMAL @ self.psi(_GRID) ** 2)
+        return self.consistency**2 / self.mean_square
 
 
 @dataclass(frozen=True)
@@ -68,6 +84,13 @@ class Plain(Loss):
 
     def weight(self, u):
         return np.ones_like(u, dtype=float)
+
+    def slope(self, u):
+        return np.ones_like(u, dtype=float)
+
+    @property
+    def log_norm(self):
+        return _LOG_ROOT_2PI
 
 
 @dataclass(frozen=True)
@@ -88,6 +111,17 @@ class Watson(Loss):
 
     def weight(self, u):
         return 1 / (1 + self.alpha * np.square(u))
+
+    def slope(self, u):
+        share = self.alpha * np.square(u)
+        return (1 - share) / (1 + share) ** 2
+
+    @property
+    def log_norm(self):
+        power = 1 / (2 * self.alpha)
+        if power <= 0.5:
+            return np.inf  # the tails are too heavy for a density
+        return float((np.log(np.pi / self.alpha)) / 2 + gammaln(power - 0.5) - gammaln(power))
 
 
 @dataclass(frozen=True)
@@ -111,6 +145,14 @@ class Huber(Loss):
         size = np.abs(np.asarray(u, dtype=float))
         return np.divide(self.k, size, out=np.ones_like(size), where=size > self.k)
 
+    def slope(self, u):
+        return (np.abs(u) <= self.k).astype(float)
+
+    @property
+    def log_norm(self):
+        middle = _LOG_ROOT_2PI + np.log(2 * ndtr(self.k) - 1)
+        return float(np.logaddexp(middle, np.log(2 / self.k) - self.k**2 / 2))
+
 
 @dataclass(frozen=True)
 class Student(Loss):
@@ -130,6 +172,14 @@ class Student(Loss):
 
     def weight(self, u):
         return (self.nu + 1) / (self.nu + np.square(u))
+
+    def slope(self, u):
+        square = np.square(u)
+        return (self.nu + 1) * (self.nu - square) / (self.nu + square) ** 2
+
+    @property
+    def log_norm(self):
+        return float(np.log(np.pi * self.nu) / 2 + gammaln(self.nu / 2) - gammaln((self.nu + 1) / 2))
 
 
 LOSSES = {"none": Plain(), "watson": Watson(), "huber": Huber(), "student": Student()}

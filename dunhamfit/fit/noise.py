@@ -90,7 +90,7 @@ def estimate(
     ------
     NotConverged
     """
-    label, names = _labels(check_policy(policy), groups, lines)
+    label, names = factor_labels(check_policy(policy), groups, lines)
     count = len(groups)
     # One common factor multiplies everything alike: it is told by as little as one degree of freedom.
     least = {"least_degrees": 1.0} if policy == "common" else {}
@@ -109,7 +109,8 @@ def group_names(groups: Groups, lines: LineList) -> tuple[str, ...]:
     )
 
 
-def _labels(policy: str, groups: Groups, lines: LineList) -> tuple[np.ndarray, tuple[str, ...]]:
+def factor_labels(policy: str, groups: Groups, lines: LineList) -> tuple[np.ndarray, tuple[str, ...]]:
+    """Index of the factor of each group, and what each factor belongs to; not for the policy "stated"."""
     if policy == "common":
         return np.zeros(len(groups), dtype=int), ("all lines",)
     if policy == "per-source":

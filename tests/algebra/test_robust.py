@@ -25,6 +25,21 @@ def test_psi_is_the_derivative_of_rho(name):
 
 
 @pytest.mark.parametrize("name", NAMES)
+def test_slope_is_the_derivative_of_psi(name):
+    step = 1e-5
+    u = U + 1e-3  # off the kinks of Huber's psi
+    slope = (loss(name).psi(u + step) - loss(name).psi(u - step)) / (2 * step)
+    # Central differences: step^2 from curvature and 1e-16/step from rounding.
+    assert_allclose(loss(name).slope(u), slope, atol=1e-8)
+
+
+@pytest.mark.parametrize("item", [*LOSSES.values(), Watson(alpha=0.2), Huber(k=2.0), Student(nu=7.0)])
+def test_log_norm_is_the_integral_by_quadrature(item):
+    area = 2 * quad(lambda u: np.exp(-item.rho(u)), 0, np.inf, limit=200)[0]
+    assert item.log_norm == pytest.approx(np.log(area), abs=1e-7)  # what quad claims for such tails
+
+
+@pytest.mark.parametrize("name", NAMES)
 def test_weights_fall_with_size_and_ignore_the_sign(name):
     weights = loss(name).weight(np.linspace(0.0, 1e6, 1001))
     assert np.all(np.diff(weights) <= 0) and np.all(weights > 0)
