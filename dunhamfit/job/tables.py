@@ -26,6 +26,7 @@ _SOURCE = (
     "format",
     "isotopologue",
     "columns",
+    "band",
     "unit",
     "uncertainty",
     "coverage_factor",

@@ -108,8 +108,10 @@ class _Reader:
         position = self._numbers(part, "position", cells)
         part["position"] = position.values
         part["uncertainty"] = self._uncertainty(part, cells, position)
-        for key in ("v_upper", "v_lower"):
-            part[key] = self._numbers(part, key, cells).values
+        levels = self.request.levels
+        for place, key in enumerate(("v_upper", "v_lower")):
+            given = levels is not None
+            part[key] = np.full(len(cells), levels[place], float) if given else self._numbers(part, key, cells).values
         part["j_upper"], part["j_lower"] = self._rotation(part, cells)
         part["isotopologue"] = self._isotopologue(part, cells)
         self.parts.append(part)

@@ -150,7 +150,7 @@ def _find_missing(
     faults = [
         Fault(shown, 0, f"no column for {key}", "every line needs it", f"name {key} in the column map")
         for key in ("position", "v_upper", "v_lower")
-        if key not in column
+        if key not in column and not (request.band and key != "position")
     ]
     if not j_form:
         why = "J is given as j_upper with j_lower, branch with j_lower, label, or m"

@@ -108,6 +108,7 @@ def read_lines(
     format: str = "delimited",
     isotopologue: str | Mapping[int, str] | None = None,
     columns: Mapping[str, str | int] | None = None,
+    band: str | None = None,
     unit: str = "cm-1",
     uncertainty: float | None = None,
     coverage_factor: float = 1.0,
@@ -129,7 +130,7 @@ def read_lines(
     path : str or Path
     name : str, optional
         Name of the source; by default that of the file without its ending.
-    format, isotopologue, columns, unit, uncertainty, coverage_factor, offset, scale, use, decimal, \
+    format, isotopologue, columns, band, unit, uncertainty, coverage_factor, offset, scale, use, decimal, \
 delimiter, header, comment, repeats, allow_high_j
         As in `SourceRequest`.
 
@@ -157,6 +158,7 @@ delimiter, header, comment, repeats, allow_high_j
         format=format,
         isotopologue=isotopologue,
         columns=columns,
+        band=band,
         unit=unit,
         uncertainty=uncertainty,
         coverage_factor=coverage_factor,

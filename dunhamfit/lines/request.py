@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -29,6 +30,7 @@ COLUMNS = (
 )
 # The ways to give J, in the order in which a header without a column map is searched.
 J_FORMS = (("j_upper", "j_lower"), ("branch", "j_lower"), ("label",), ("m",))
+_BAND = re.compile(r"\d{1,3}-\d{1,3}")
 DELIMITERS = {"comma": ",", "tab": "\t", "semicolon": ";", "blanks": " "}
 
 
@@ -48,6 +50,8 @@ class SourceRequest:
         isotopologues of a molecule whose published numbering is known.
     columns : dict of str to (str or int), or None
         From the names in `COLUMNS` to header names or column numbers from 1; None takes the header's.
+    band : str or None
+        Such as "1-0", for tables of one band without columns for v.
     unit : str
         Of positions and uncertainties, one of `dunhamfit.units.UNITS`.
     uncertainty : float or None, in `unit`
@@ -84,6 +88,7 @@ class SourceRequest:
     format: str = "delimited"
     isotopologue: str | Mapping[int, str] | None = None
     columns: Mapping[str, str | int] | None = None
+    band: str | None = None
     unit: str = "cm-1"
     uncertainty: float | None = None
     coverage_factor: float | None = None
@@ -109,6 +114,7 @@ class SourceRequest:
         self._check_words()
         self._check_numbers()
         self._check_columns()
+        self._check_band()
         self._check_isotopologue()
         if self.use is not None:
             parse_choice(self.use)
@@ -162,6 +168,21 @@ class SourceRequest:
         if len(given) > 1:
             ways = " and as ".join(" with ".join(form) for form in given)
             raise UsageError(f"source '{self.name}': 'columns' gives J twice, as {ways}; keep one")
+
+    def _check_band(self) -> None:
+        if self.band is None:
+            return
+        if self.format == "hitran":
+            self._refuse("band", "left out for HITRAN records, which name the band of each line,", self.band)
+        if not isinstance(self.band, str) or not _BAND.fullmatch(self.band):
+            self._refuse("band", 'v\' and v\'\' such as "1-0"', self.band)
+        if {"v_upper", "v_lower"} & set(self.columns or {}):
+            raise UsageError(f"source '{self.name}': 'band' and 'columns' both give v; keep one")
+
+    @property
+    def levels(self) -> tuple[int, int] | None:
+        """v' and v'' of `band`, None where the columns give them."""
+        return None if self.band is None else tuple(int(v) for v in self.band.split("-"))
 
     def _check_isotopologue(self) -> None:
         table = self.isotopologue
