@@ -25,7 +25,8 @@ from dunhamfit.fit.record import Fit, Statistics
 from dunhamfit.fit.remarks import noise_remarks
 from dunhamfit.fit.solve import fit_model
 from dunhamfit.lines.deferred import append_lines
-from dunhamfit.lines.line_list import LineList, line_columns, merge as merge_lines
+from dunhamfit.lines.line_list import LineList, line_columns
+from dunhamfit.lines.line_list import merge as merge_lines
 
 # A step gains some ten digits; the second one takes away what the first has left.
 _STEPS = 2
@@ -90,9 +91,7 @@ def lines_for(fit: Fit, new_lines: LineList) -> LineList:
             raise UsageError(f"there is a source '{source.name}' already; give the new one a name of its own")
         for file, digest in zip(source.files, source.digests, strict=False):
             if digest in digests:
-                raise UsageError(
-                    f"{file} was read as source '{digests[digest]}' already; its lines would count double"
-                )
+                raise UsageError(f"{file} was read as source '{digests[digest]}' already; its lines would count double")
     nothing = LineList(
         **{item.name: np.empty(0) for item in line_columns()},
         isotopologues=known.isotopologues,
