@@ -55,9 +55,7 @@ def read_job_lines(job: Job) -> JobReading:
     if faults:
         return JobReading(None, readings, tuple(faults), notices)
     lines = merge([reading.lines for reading in readings])
-    for exclusion in job.exclusions:
-        lines = lines.excluded(_excluded_rows(lines, exclusion), exclusion.reason)
-    return JobReading(lines, readings, (), notices)
+    return JobReading(exclude_rows(lines, job.exclusions), readings, (), notices)
 
 
 def job_lines(job: Job) -> LineList:
@@ -91,6 +89,19 @@ def fit_job(job: Job, lines: LineList | None = None) -> Fit:
     """Read the lines of a job, unless they are given, and fit its model to them."""
     lines = job_lines(job) if lines is None else lines
     return fit_model(job_model(job, lines), lines, policy=job.policy)
+
+
+def exclude_rows(lines: LineList, exclusions: tuple[Exclusion, ...]) -> LineList:
+    """The lines without the rows that a job leaves out.
+
+    Raises
+    ------
+    UsageError
+        If a row or file does not exist.
+    """
+    for exclusion in exclusions:
+        lines = lines.excluded(_excluded_rows(lines, exclusion), exclusion.reason)
+    return lines
 
 
 def _excluded_rows(lines: LineList, exclusion: Exclusion) -> np.ndarray:
