@@ -10,6 +10,7 @@ from dunhamfit.archive.lineage import TOLERANCE, verify
 from dunhamfit.archive.store import open_archive
 from dunhamfit.cli.output import Output, file_option, json_option, quiet_option
 from dunhamfit.errors import ArchiveProblem
+from dunhamfit.job.again import repeat_run
 from dunhamfit.show.history_report import verify_document, verify_table
 
 
@@ -21,7 +22,7 @@ from dunhamfit.show.history_report import verify_document, verify_table
 def command(archive: Path, as_json: bool, path: Path | None, quiet: bool) -> int:
     """Fit every run of ARCHIVE again from the archive alone and say whether it agrees; exit code 6 if one does not."""
     with open_archive(archive) as store:
-        checks = verify(store)
+        checks = verify(store, refit=repeat_run)
     document = verify_document(checks)
     records = [
         {name: "; ".join(value) if isinstance(value, list) else value for name, value in item.items()}
