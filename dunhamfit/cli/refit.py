@@ -197,13 +197,13 @@ def run_refit(store: Archive, stored: StoredRun, plan: Plan, output: Output, *, 
     for text in fit.warnings:
         output.warn(text)
     at_hand = len(fit.lines) <= _AT_HAND
-    shifts, bands = parameter_shifts(old, fit), band_shifts(old, fit)
+    shifts, bands = parameter_shifts(old, fit, nested=plan.same), band_shifts(old, fit, nested=plan.same)
     terms = terms_within_reach(old, fit) if added is not None and plan.same and at_hand else ()
     document = {}
     if output.as_json:
         document = fit_document(fit, run=run, parent=stored.run, notices=notices)
         document |= refit_document(arrivals, shifts, bands, terms)
-    parts = [*arrival_parts(arrivals), shifts_table(shifts)]
+    parts = [*arrival_parts(arrivals), shifts_table(shifts, nested=plan.same)]
     parts += [band_shifts_table(bands)] if bands else []
     parts += [terms_table(terms)] if terms else []
     output.result(document, [*parts, *_fit_parts(fit, at_hand=at_hand)])

@@ -110,7 +110,7 @@ class Arrival:
         Lines that stand out at 5 % in all, each after those before it are left out.
     agrees : bool
         At 5 %.
-    explanation : "", "offset", "scale", "single lines", "noise" or "none"
+    explanation : "", "offset", "scale", "single lines", "noise", "offset and noise", "scale and noise" or "none"
         What makes lines agree that do not.
     """
 
@@ -152,18 +152,6 @@ def check_arrival(fit: Fit, new_lines: LineList) -> Arrival:
     problem = _problem(fit, lines)
     residuals = problem.residual * problem.sigma
     deviations, rest = _single_lines(problem, lines)
-    scatter = problem.scatter
-    explanation = ""
-    if not problem.agrees:
-        explaining = [item for item in problem.shifts if item.p_rest >= _LEVEL_OF_PART]
-        if explaining:
-            explanation = min(explaining, key=lambda item: item.chi2).kind
-        elif deviations and rest.agrees:
-            explanation = "single lines"
-        elif scatter > 1 and problem.with_noise(scatter).agrees:
-            explanation = "noise"
-        else:
-            explanation = "none"
     return Arrival(
         source=new_lines.sources[0].name,
         lines=len(residuals),
@@ -172,11 +160,11 @@ def check_arrival(fit: Fit, new_lines: LineList) -> Arrival:
         p=float(chdtrc(problem.dof, problem.chi2)) if problem.dof > 0 else float("nan"),
         rms=float(np.sqrt(np.mean(residuals**2))),
         mean_residual=float(np.mean(residuals)),
-        scatter=scatter,
+        scatter=problem.scatter,
         shifts=problem.shifts,
         deviations=deviations,
         agrees=problem.agrees,
-        explanation=explanation,
+        explanation="" if problem.agrees else _explanation(problem, rest),
     )
 
 
@@ -313,6 +301,27 @@ def _problem(fit: Fit, lines: LineList) -> _Problem:
         prior=np.append(np.ones(fit.factor.shape[1]), [0.0 if prior is None else 1 / prior.sigma for prior in priors]),
         free=tuple(item.kind for item, prior in zip(calibration, priors, strict=True) if prior is None),
     )
+
+
+def _explanation(problem: _Problem, rest: _Problem) -> str:
+    """The simplest of the known reasons that makes the lines agree; `rest` is without single lines."""
+    if kind := _explaining_shift(problem):
+        return kind
+    if rest.agrees:
+        return "single lines"
+    if problem.scatter > 1:
+        noisier = problem.with_noise(problem.scatter)
+        if noisier.agrees:
+            return "noise"
+        if kind := _explaining_shift(noisier):
+            return f"{kind} and noise"
+    return "none"
+
+
+def _explaining_shift(problem: _Problem) -> str:
+    """Kind of the shift that leaves least of chi2, if what it leaves is as expected."""
+    explaining = [item for item in problem.shifts if item.p_rest >= _LEVEL_OF_PART]
+    return min(explaining, key=lambda item: item.chi2).kind if explaining else ""
 
 
 def _single_lines(problem: _Problem, lines: LineList) -> tuple[tuple[Deviation, ...], _Problem]:

@@ -34,7 +34,7 @@ class Shift:
     old, new : float
     shift : float
     sigma_shift : float
-        sqrt(C_old - C_new) of the parameter; NaN where its sigma has not shrunk.
+        sqrt(C_old - C_new) of the parameter; NaN where the fits are not nested or its sigma has not shrunk.
     in_sigma : float
         shift / sigma_shift.
     sigma_old, sigma_new : float
@@ -63,7 +63,7 @@ class BandShift:
     shift : float
         Root mean square, in the stated uncertainties of the lines.
     expected : float
-        The same as C_old - C_new lets expect; NaN where that is not positive.
+        The same as C_old - C_new lets expect; NaN where the fits are not nested or that is not positive.
     """
 
     band: str
@@ -91,8 +91,15 @@ class TermWithinReach:
     sigma_old: float
 
 
-def parameter_shifts(old: Fit, new: Fit) -> tuple[Shift, ...]:
-    """Shift of every parameter that both fits have, fixed ones left out, in the order of the new fit."""
+def parameter_shifts(old: Fit, new: Fit, *, nested: bool = True) -> tuple[Shift, ...]:
+    """Shift of every parameter that both fits have, fixed ones left out, in the order of the new fit.
+
+    Parameters
+    ----------
+    old, new : Fit
+    nested : bool
+        Whether the new fit differs from the old one by further lines alone.
+    """
     places = {name: place for place, name in enumerate(old.model.names)}
     found = []
     for place, item in enumerate(new.model.parameters):
@@ -101,7 +108,7 @@ def parameter_shifts(old: Fit, new: Fit) -> tuple[Shift, ...]:
             continue
         sigma_old, sigma_new = float(old.sigmas[before]), float(new.sigmas[place])
         lost = (sigma_old - sigma_new) * (sigma_old + sigma_new)
-        sigma = float(np.sqrt(lost)) if lost > _SAME * sigma_old**2 else float("nan")
+        sigma = float(np.sqrt(lost)) if nested and lost > _SAME * sigma_old**2 else float("nan")
         value, value_before = float(new.values[place]), float(old.values[before])
         found.append(
             Shift(
@@ -119,10 +126,11 @@ def parameter_shifts(old: Fit, new: Fit) -> tuple[Shift, ...]:
     return tuple(found)
 
 
-def band_shifts(old: Fit, new: Fit) -> tuple[BandShift, ...]:
+def band_shifts(old: Fit, new: Fit, *, nested: bool = True) -> tuple[BandShift, ...]:
     """Shift of the calculated positions of every band of the old fit, the largest first.
 
     The constants alone are moved; the calibration errors of the spectra are no part of a prediction.
+    Nothing is returned for fits with different constants.
     """
     count = len(old.constants)
     if new.model.names[:count] != old.model.names[:count]:
@@ -133,7 +141,7 @@ def band_shifts(old: Fit, new: Fit) -> tuple[BandShift, ...]:
         rows = triangle.r[:, :count]
         moved = float(np.sum((rows @ change) ** 2))
         lost = float(np.sum((rows @ old.factor[:count]) ** 2) - np.sum((rows @ new.factor[:count]) ** 2))
-        expected = float(np.sqrt(lost / triangle.n)) if lost > 0 else float("nan")
+        expected = float(np.sqrt(lost / triangle.n)) if nested and lost > 0 else float("nan")
         found.append(BandShift(name, triangle.n, float(np.sqrt(moved / triangle.n)), expected))
     return tuple(sorted(found, key=lambda item: -item.shift))
 

@@ -32,14 +32,14 @@ def refit_document(
 
 
 def arrival_parts(arrivals: Iterable[Arrival]) -> list[Table | str]:
-    """One table of tests for all new sources, one of lines that stand out, and a verdict for each."""
+    """One table of tests for all new sources, with a verdict for each, and one of lines that stand out."""
     arrivals = tuple(arrivals)
     if not arrivals:
         return []
     parts: list[Table | str] = [_tests_table(arrivals)]
     if any(item.deviations for item in arrivals):
         parts.append(_deviations_table(arrivals))
-    return [*parts, *(verdict(item) for item in arrivals)]
+    return parts
 
 
 def verdict(arrival: Arrival) -> str:
@@ -50,9 +50,11 @@ def verdict(arrival: Arrival) -> str:
         text = f"{name} agrees with the constants before the merge"
         return f"{text}, but {lines} should be looked at." if count else f"{text}."
     text = f"{name} does NOT agree with the constants before the merge (5 % level)"
-    if arrival.explanation in ("offset", "scale"):
-        shift = next(item for item in arrival.shifts if item.kind == arrival.explanation)
-        return f"{text}; one {shift.kind} of {_shift(shift)} for all of its lines explains it{_rival(arrival, shift)}."
+    kind, _, noisier = arrival.explanation.partition(" and ")
+    if kind in ("offset", "scale"):
+        shift = next(item for item in arrival.shifts if item.kind == kind)
+        text = f"{text}; one {kind} of {_shift(shift)} for all of its lines explains it{_rival(arrival, shift)}"
+        return f"{text}, with uncertainties multiplied by {arrival.scatter:.3g}." if noisier else f"{text}."
     if arrival.explanation == "single lines":
         return f"{text}; without {lines} it does."
     if arrival.explanation == "noise":
@@ -66,7 +68,7 @@ def verdict(arrival: Arrival) -> str:
     )
 
 
-def shifts_table(shifts: Iterable[Shift]) -> Table:
+def shifts_table(shifts: Iterable[Shift], *, nested: bool = True) -> Table:
     """Every parameter before and after, its shift in units of sigma, and how its sigma shrank."""
     rows = tuple(
         (
@@ -85,11 +87,15 @@ def shifts_table(shifts: Iterable[Shift]) -> Table:
         Column("shift/sigma", "decimal"),
         Column("sigma ratio", "decimal"),
     )
-    notes = (
-        "The new fit holds the lines of the old one, so that sigma of a shift is the root of (sigma before)^2 - "
-        "(sigma after)^2; none is given where sigma has not shrunk, as new noise factors or another model can cause.",
-    )
-    return Table("What the merge moved", columns, rows, notes)
+    if nested:
+        note = (
+            "The new fit holds the lines of the old one, so that sigma of a shift is the root of (sigma before)^2 - "
+            "(sigma after)^2. None is given where sigma has not shrunk, which new noise factors can cause."
+        )
+        return Table("What the new lines moved", columns, rows, (note,))
+    columns, rows = (*columns[:3], columns[4]), tuple((*row[:3], row[4]) for row in rows)
+    note = "More than the lines has changed, so that no sigma of a shift follows from the two error bars."
+    return Table("What the change moved", columns, rows, (note,))
 
 
 def band_shifts_table(bands: Iterable[BandShift]) -> Table:
@@ -167,7 +173,8 @@ def _tests_table(arrivals: tuple[Arrival, ...]) -> Table:
         Column("dof", "right"),
         Column("p", "right"),
     )
-    notes = tuple(
+    notes = tuple(verdict(item) for item in arrivals)
+    notes += tuple(
         f"{item.source}: {item.lines} lines, rms {format_number(item.rms, digits=3)} cm-1 and mean "
         f"{format_number(item.mean_residual, digits=2)} cm-1 about the old constants"
         + (
