@@ -39,6 +39,8 @@ _LEVEL_OF_PART = 1 - math.sqrt(1 - LEVEL)
 _FEW, _MOST = 0.1, 25
 # Part of the variance of a line, or of a shift, below which the unknowns explain all of it.
 _NOTHING_LEFT = 1e-9
+# Uncertainties are understated by factors of a few; lines that scatter more than this are wrong.
+_LARGEST_SCATTER = 10.0
 # As `dunhamfit.algebra.variance`: fewer degrees of freedom tell no noise.
 _LEAST_DEGREES = 4
 
@@ -309,7 +311,7 @@ def _explanation(problem: _Problem, rest: _Problem) -> str:
         return kind
     if rest.agrees:
         return "single lines"
-    if problem.scatter > 1:
+    if 1 < problem.scatter < _LARGEST_SCATTER:
         noisier = problem.with_noise(problem.scatter)
         if noisier.agrees:
             return "noise"
