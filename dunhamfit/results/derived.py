@@ -142,8 +142,6 @@ def derive(fit: Fit, isotopologue: str | None = None) -> DerivedConstants:
     ------
     UsageError
         If it is no isotopologue of the fit's molecule.
-    NotConverged
-        If no potential belongs to the constants.
     """
     own = own_constants(fit, isotopologue)
     found = _Collected(own)
@@ -151,10 +149,14 @@ def derive(fit: Fit, isotopologue: str | None = None) -> DerivedConstants:
         place = own.index(k, l)
         if place is not None:
             found.add(name, sign * own.values[place], sign * _unit(own, k, l), "cm-1", definition)
-    potential = potential_of(own)
-    if potential is None:
-        found.remarks.append("no Dunham corrections and no Y00: they need Y10, Y20, Y01 and Y11")
-    else:
+    potential = None
+    try:
+        potential = potential_of(own)
+        if potential is None:
+            found.remarks.append("no Dunham corrections and no Y00: they need Y10, Y20, Y01 and Y11")
+    except NotConverged as problem:
+        found.remarks.append(f"no Dunham corrections and no Y00: {problem}")
+    if potential is not None:
         _corrected(found, potential)
         _zero_point(found, potential)
     if own.index(0, 1) is not None:
@@ -169,12 +171,11 @@ def potential_of(own: OwnConstants) -> Potential | None:
     ------
     NotConverged
     """
-    for wanted, corrected in _LEVELS:
-        places = [own.index(k, l) for k, l in wanted]
-        if None not in places:
-            break
-    else:
+    usable = [level for level in _LEVELS if all(own.index(k, l) is not None for k, l in level[0])]
+    if not usable:
         return None
+    wanted, corrected = usable[0]
+    places = [own.index(k, l) for k, l in wanted]
     target = own.values[places]
     y10, y20, y01, y11 = target[:4]
     if not (y10 > 0 and y01 > 0):

@@ -7,7 +7,8 @@ would give other constants: with A(M) c the calculated positions,
 
 (to first order, the residuals being small), and the constants of an isotopologue would change by that
 and by the change of their own mass factors. The two cancel for an isotopologue whose lines were
-measured; for others something remains. The evaluated masses are taken as uncorrelated.
+measured; for others something remains. Noise factors are kept as they are, which holds for changes that
+leave the residuals as small as they were. The evaluated masses are taken as uncorrelated.
 """
 
 from __future__ import annotations

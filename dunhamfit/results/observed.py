@@ -48,6 +48,11 @@ class ObservedLevels:
         """Whether each level was reached with all isotopologues taken together, shape of `v`."""
         return _within(self._any, v, j)
 
+    def highest_j(self, isotopologue: str, v: int) -> int:
+        """Highest J that was reached for one v of the isotopologue; -1 where none was."""
+        own = self._of.get(self._model.isotopologue(isotopologue).formula)
+        return -1 if own is None or v >= len(own[1]) else int(own[1][v])
+
     def words(self, isotopologue: str, levels) -> np.ndarray:
         """`INSIDE`, `OTHER` or `OUTSIDE` for entries whose levels are all given by (v, j) pairs of columns."""
         own = np.all([self.inside(isotopologue, v, j) for v, j in levels], axis=0)
