@@ -93,7 +93,14 @@ def validity_table(validity: Iterable, *, isotopologue: str, tolerance: float) -
 
 def _parts(item: Mapping[str, object]) -> tuple[str, ...]:
     names = ("sigma_fit", "sigma_calibration", "sigma_model")
-    return tuple("" if item[name] is None else format_number(item[name], digits=2) for name in names)
+    return tuple(_part(item[name], item["sigma"]) for name in names)
+
+
+def _part(part: float | None, sigma: float) -> str:
+    """A part of sigma; a millionth of it or less is nothing."""
+    if part is None:
+        return ""
+    return format_number(part, digits=2) if part > 1e-6 * sigma else "0"
 
 
 def _with_spread(title, lead, rows, records, fit: Fit, unit: str, *, keys: int) -> Table:
