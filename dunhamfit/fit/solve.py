@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from types import MappingProxyType
 
 import numpy as np
@@ -11,6 +12,7 @@ from scipy.linalg import cholesky
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.least_squares import Solution, first_triangle, refine, sharpened
 from dunhamfit.algebra.rank import Rank
+from dunhamfit.algebra.robust import loss
 from dunhamfit.algebra.rows import Rows
 from dunhamfit.algebra.triangle import covariance_factor, solve
 from dunhamfit.fit.design import Design, build_design
@@ -18,6 +20,7 @@ from dunhamfit.fit.identify import check_rank, check_structure, floating_bands, 
 from dunhamfit.fit.model import Model, Prior
 from dunhamfit.fit.noise import Noise, as_stated, check_policy, estimate
 from dunhamfit.fit.record import Fit, Statistics
+from dunhamfit.fit.robust import Reweighted, reweight
 from dunhamfit.lines.line_list import LineList
 from dunhamfit.molecule.isotopologue import Isotopologue
 from dunhamfit.molecule.masses import Masses
@@ -79,11 +82,13 @@ def fit_lines(
     breakdown: Mapping[str, Sequence[str]] | None = None,
     priors: Mapping[str, Prior] | None = None,
     policy: str = "stated",
+    robust: str = "none",
     masses: Masses | None = None,
 ) -> Fit:
     """Fit Dunham coefficients to all used lines at once.
 
-    Parameters are those of `make_model`; `policy` is one of `dunhamfit.fit.noise.POLICIES`.
+    Parameters are those of `make_model`; `policy` is one of `dunhamfit.fit.noise.POLICIES`,
+    `robust` one of `dunhamfit.algebra.robust.LOSSES`.
 
     Returns
     -------
@@ -92,52 +97,92 @@ def fit_lines(
     Raises
     ------
     UsageError
-        For a policy, isotopologue or term that does not exist.
+        For a policy, robust loss, isotopologue or term that does not exist.
     CannotDetermine
         If the lines cannot determine the model; no constants are made.
     NotConverged
-        If the noise factors or the refinement do not settle.
+        If the noise factors, the robust weights or the refinement do not settle.
     """
     model = make_model(lines, terms, reference=reference, breakdown=breakdown, priors=priors, masses=masses)
-    return fit_model(model, lines, policy=policy)
+    return fit_model(model, lines, policy=policy, robust=robust)
 
 
-def fit_model(model: Model, lines: LineList, *, policy: str = "stated") -> Fit:
+def fit_model(model: Model, lines: LineList, *, policy: str = "stated", robust: str = "none") -> Fit:
     """Fit an assembled model; raises what `fit_lines` raises."""
     check_policy(policy)
+    chosen_loss = loss(robust)
     design = build_design(model, lines)
     check_structure(model, lines, design)
-    free = np.flatnonzero(~model.fixed)
     given = np.array([0.0 if (p := model.prior(item)) is None else p.value for item in model.parameters])
-    rows = design.rows if len(free) == len(given) else design.rows.held(*_fixed(model, given))
+    rows = _free_rows(model, design, given)
     start = first_triangle(rows)
     rank = check_rank(model, start.r)
     solution = refine(rows, start.r, solve(start))
-    noise, allowance = as_stated(design.groups), None
-    if policy != "stated":
-        noise, allowance = estimate(policy, rows.triangles(solution.values), design.groups, lines)
-        rows = rows.reweighted(_row_factors(noise, rows))
-        solution = refine(rows, first_triangle(rows).r, solution.values)
+    if robust == "none":
+        outcome = _plain(lines, design, rows, solution, rank, policy)
+    else:
+        found = reweight(design, rows, solution, loss=chosen_loss, policy=policy, lines=lines)
+        outcome = _reweighted(model, lines, rows, given, found)
+    free = np.flatnonzero(~model.fixed)
     factor = np.zeros((len(given), len(free)))
-    factor[free] = _factor(rows, solution, rank, allowance)
+    factor[free] = outcome.factor
     values = given
-    values[free] = solution.values
+    values[free] = outcome.values
     return Fit(
         model=model,
         lines=lines,
         values=values,
         factor=factor,
-        noise=noise,
+        noise=outcome.noise,
         groups=design.groups,
-        statistics=_statistics(design, rows, solution, rank, noise),
-        warnings=_warnings(lines, design, noise, rank),
-        design_made=design,
+        statistics=_statistics(rows, rank, outcome),
+        warnings=_warnings(lines, design, outcome.noise, rank),
+        robust=robust,
+        line_weights=outcome.line_weights,
+        design_made=outcome.design,
     )
 
 
-def _fixed(model: Model, given: np.ndarray):
+@dataclass(frozen=True, eq=False)
+class _Outcome:
+    """Free parameters of a fit; `residual` is that of the rows with stated uncertainties, cm-1."""
+
+    values: np.ndarray
+    factor: np.ndarray
+    residual: np.ndarray
+    noise: Noise
+    log_likelihood: float
+    design: Design
+    line_weights: np.ndarray | None = None
+
+
+def _plain(
+    lines: LineList, design: Design, rows: Rows, solution: Solution, rank: Rank, policy: str
+) -> _Outcome:
+    noise, allowance, weighted = as_stated(design.groups), None, rows
+    if policy != "stated":
+        noise, allowance = estimate(policy, rows.triangles(solution.values), design.groups, lines)
+        weighted = rows.reweighted(_row_factors(noise, rows))
+        solution = refine(weighted, first_triangle(weighted).r, solution.values)
+    likelihood = log_likelihood(solution.chi2, int(rows.lines.sum()), float(weighted.log_sigma.sum()))
+    factor = _factor(weighted, solution, rank, allowance)
+    return _Outcome(solution.values, factor, solution.residuals.high, noise, likelihood, design)
+
+
+def _reweighted(model: Model, lines: LineList, rows: Rows, given: np.ndarray, found: Reweighted) -> _Outcome:
+    design = build_design(model, lines, found.line_weights)
+    weighted = _free_rows(model, design, given).reweighted(_row_factors(found.noise, rows))
+    values = refine(weighted, first_triangle(weighted).r, found.values).values
+    residual = rows.residuals(values).high
+    return _Outcome(
+        values, found.factor, residual, found.noise, found.log_likelihood, design, found.line_weights
+    )
+
+
+def _free_rows(model: Model, design: Design, given: np.ndarray) -> Rows:
+    """Rows of the free parameters."""
     columns = np.flatnonzero(model.fixed)
-    return columns, given[columns]
+    return design.rows.held(columns, given[columns]) if len(columns) else design.rows
 
 
 def _row_factors(noise: Noise, rows: Rows) -> np.ndarray:
@@ -156,23 +201,22 @@ def _factor(rows: Rows, solution: Solution, rank: Rank, allowance: np.ndarray | 
     return factor @ cholesky(np.eye(len(r)) + r @ allowance @ r.T, lower=True)
 
 
-def _statistics(design: Design, rows: Rows, solution: Solution, rank: Rank, noise: Noise) -> Statistics:
-    lines, data, parameters = len(design.used), int(rows.lines.sum()), len(solution.values)
-    stated = solution.residuals.high * design.rows.scale
-    chi2 = float(stated @ stated) + float(design.rows.spread.sum())
+def _statistics(rows: Rows, rank: Rank, outcome: _Outcome) -> Statistics:
+    data, parameters = int(rows.lines.sum()), rows.parameters
+    stated = outcome.residual * rows.scale
+    chi2 = float(stated @ stated) + float(rows.spread.sum())
     dof = data - parameters
-    likelihood = log_likelihood(solution.chi2, data, float(rows.log_sigma.sum()))
-    counted = parameters + len(noise.factors)
+    counted = parameters + len(outcome.noise.factors)
     return Statistics(
-        lines=lines,
+        lines=int(rows.lines[: len(outcome.noise.label)].sum()),
         parameters=parameters,
         dof=dof,
         chi2=chi2,
         reduced_chi2=reduced_chi2(chi2, dof),
         condition=rank.condition,
-        log_likelihood=likelihood,
-        aicc=aicc(likelihood, data, counted),
-        bic=bic(likelihood, data, counted),
+        log_likelihood=outcome.log_likelihood,
+        aicc=aicc(outcome.log_likelihood, data, counted),
+        bic=bic(outcome.log_likelihood, data, counted),
     )
 
 

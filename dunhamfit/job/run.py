@@ -88,7 +88,7 @@ def job_model(job: Job, lines: LineList) -> Model:
 def fit_job(job: Job, lines: LineList | None = None) -> Fit:
     """Read the lines of a job, unless they are given, and fit its model to them."""
     lines = job_lines(job) if lines is None else lines
-    return fit_model(job_model(job, lines), lines, policy=job.policy)
+    return fit_model(job_model(job, lines), lines, policy=job.policy, robust=job.robust)
 
 
 def exclude_rows(lines: LineList, exclusions: tuple[Exclusion, ...]) -> LineList:
