@@ -6,37 +6,48 @@ import math
 
 from dunhamfit.fit.record import Fit
 from dunhamfit.fit.summary import summarise_bands, summarise_sources
+from dunhamfit.inference.influence import calibration_share
+from dunhamfit.inference.systematics import find_systematics
+from dunhamfit.inference.weighted import is_tied
+from dunhamfit.show.diagnostics_report import striking, systematics_table
 from dunhamfit.show.numbers import format_number, format_value
 from dunhamfit.show.policy import policy_words
+from dunhamfit.show.rounding import rounded_constants
 from dunhamfit.show.tables import Column, Table
 
 
 def fit_tables(fit: Fit) -> tuple[Table, ...]:
-    """All tables of a fit, top to bottom."""
+    """All tables of a fit, top to bottom; systematic residuals only where there are any."""
     tables = [constants_table(fit)]
     if len(fit.values) > len(fit.constants):
         tables.append(calibration_table(fit))
-    return (*tables, sources_table(fit), bands_table(fit))
+    tables += [sources_table(fit), bands_table(fit)]
+    findings = () if is_tied(fit) else find_systematics(fit)
+    return (*tables, systematics_table(findings)) if striking(findings) else tuple(tables)
 
 
 def constants_table(fit: Fit) -> Table:
     """Constants as value(sigma), with the error policy under them."""
+    printed, shares = rounded_constants(fit), calibration_share(fit)
     rows = []
     for index, constant in enumerate(fit.constants):
         value, sigma = float(fit.values[index]), float(fit.sigmas[index])
         size = format_number(abs(value) / sigma, digits=2) if sigma else ""
-        rows.append((constant.name, format_value(value, sigma), size, fit.origins.get(constant.name, "")))
+        share = format_number(float(shares[index]), digits=2) if sigma else ""
+        rows.append((constant.name, printed.texts[index], size, share, fit.origins.get(constant.name, "")))
     columns = (
         Column("constant"),
         Column("value(sigma)", "decimal", "cm-1"),
         Column("|value|/sigma", "right"),
+        Column("of which calibration", "right", "cm-1"),
         Column("fixed from"),
     )
-    if not fit.origins:
-        columns, rows = columns[:3], [row[:3] for row in rows]
+    shown = [0, 1, 2, *([3] if shares.any() else []), *([4] if fit.origins else [])]
+    columns, rows = tuple(columns[i] for i in shown), [tuple(row[i] for i in shown) for row in rows]
     stats = fit.statistics
     notes = (
         policy_words(fit),
+        printed.note,
         f"chi2 {format_number(stats.chi2)} for {stats.dof} degrees of freedom against the stated uncertainties "
         f"(reduced {format_number(stats.reduced_chi2)}); condition of the scaled design "
         f"{format_number(stats.condition, digits=2)}; BIC {stats.bic:.1f}.",
