@@ -43,7 +43,8 @@ _LEVELS = (
     ((*_LEADING, (3, 0), (2, 1)), ((1, 0), (0, 1))),
     (_LEADING, ()),
 )
-_PLAIN = (
+# Name, k, l, sign and definition of the conventional constants.
+CONVENTIONAL = (
     ("omega_e", 1, 0, 1, "Y10"),
     ("omega_e x_e", 2, 0, -1, "-Y20"),
     ("omega_e y_e", 3, 0, 1, "Y30"),
@@ -145,7 +146,7 @@ def derive(fit: Fit, isotopologue: str | None = None) -> DerivedConstants:
     """
     own = own_constants(fit, isotopologue)
     found = _Collected(own)
-    for name, k, l, sign, definition in _PLAIN:
+    for name, k, l, sign, definition in CONVENTIONAL:
         place = own.index(k, l)
         if place is not None:
             found.add(name, sign * own.values[place], sign * _unit(own, k, l), "cm-1", definition)
