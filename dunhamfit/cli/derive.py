@@ -10,7 +10,9 @@ from dunhamfit.cli.archived import archive_argument, isotopologue_option, load_r
 from dunhamfit.cli.output import Output, file_option, json_option, quiet_option
 from dunhamfit.results.derived import derive
 from dunhamfit.results.isotopologues import mass_independent, own_constants
+from dunhamfit.results.turning_points import molecular_curve
 from dunhamfit.results.vibrational import vibrational_constants
+from dunhamfit.show.curve_report import curve_document, curve_table
 from dunhamfit.show.derive_report import derive_document, derive_records, derive_tables
 
 
@@ -18,6 +20,7 @@ from dunhamfit.show.derive_report import derive_document, derive_records, derive
 @archive_argument
 @isotopologue_option
 @click.option("--vmax", "v_max", type=int, help="Highest v of the levels; by default the highest that a line reaches.")
+@click.option("--turning-points", is_flag=True, help="Also the turning points, and the potential through them.")
 @run_option
 @json_option
 @file_option
@@ -26,6 +29,7 @@ def command(
     archive: Path,
     isotopologue: str | None,
     v_max: int | None,
+    turning_points: bool,
     run: int | None,
     as_json: bool,
     path: Path | None,
@@ -38,4 +42,9 @@ def command(
     levels = vibrational_constants(fit, isotopologue, v_max=v_max)
     masses = mass_independent(fit) if fit.model.breakdown else None
     document = derive_document(derived, own, levels, masses, run=number)
-    output.result(document, derive_tables(derived, own, levels, masses, fit), records=derive_records(document))
+    tables = derive_tables(derived, own, levels, masses, fit)
+    if turning_points:
+        curve = molecular_curve(fit, isotopologue, v_max=v_max)
+        document = {**document, **curve_document(curve)}
+        tables.append(curve_table(curve))
+    output.result(document, tables, records=derive_records(document))

@@ -62,3 +62,16 @@ def test_tables_and_csv(archive, tmp_path, capsys):
         rows = {row["name"]: row for row in csv.DictReader(file)}
     assert float(rows["D_e"]["value"]) > 0
     assert rows["r_e"]["unit"] == "A"
+
+
+def test_turning_points_on_request(archive, capsys):
+    capsys.readouterr()
+    assert main(["derive", str(archive), "--turning-points", "--vmax", "3", "--json"]) == 0
+    document = json.loads(capsys.readouterr().out)
+    assert [item["v"] for item in document["turning_points"]] == [0, 1, 2, 3]
+    assert all(item["r_min"] < item["r_max"] for item in document["turning_points"])
+    assert len(document["potential"]["r"]) == len(document["potential"]["energy"])
+    # The first-order method leaves out what Dunham's correction of omega_e (0.005 cm-1 here) stands for, per quantum.
+    assert max(map(abs, document["potential_check"]["origin"])) < 4 * 0.006
+    assert main(["derive", str(archive), "--turning-points", "--vmax", "2"]) == 0
+    assert "Turning points of 28Si32S" in capsys.readouterr().out
