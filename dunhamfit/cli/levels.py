@@ -29,6 +29,7 @@ from dunhamfit.units import UNITS
 @click.option("--unit", type=click.Choice(UNITS[:-1]), default="cm-1", show_default=True)
 @spread_option
 @click.option("--tolerance", type=float, metavar="CM-1", help="Also show up to which J levels are known to this sigma.")
+@click.option("--covariance", is_flag=True, help="Add the covariance of the levels, in cm-2, to the JSON object.")
 @run_option
 @json_option
 @file_option
@@ -41,6 +42,7 @@ def command(
     unit: str,
     model_spread: bool,
     tolerance: float | None,
+    covariance: bool,
     run: int | None,
     as_json: bool,
     path: Path | None,
@@ -57,4 +59,6 @@ def command(
     if tolerance is not None:
         limits = validity(energy_levels(fit, j_max=max(J_LIMIT, j_max), **chosen), tolerance, ObservedLevels(fit))
         parts.append(validity_table(limits, isotopologue=found.isotopologue, tolerance=tolerance))
-    output.result(levels_document(records, run=number, validity=limits), parts, records=records)
+    matrix = found.parts.covariance if covariance else None
+    document = levels_document(records, run=number, validity=limits, covariance=matrix)
+    output.result(document, parts, records=records)

@@ -47,6 +47,8 @@ class ConstantChange:
     old, new, shift : float, cm-1
     sigma_shift : float, cm-1
         NaN where it is not known; `why` then says why.
+    sigma_old, sigma_new : float, cm-1
+        NaN where not known.
     why : str
     """
 
@@ -55,6 +57,8 @@ class ConstantChange:
     new: float
     shift: float
     sigma_shift: float
+    sigma_old: float
+    sigma_new: float
     why: str = ""
 
 
@@ -263,8 +267,8 @@ def _change(name: str, old: tuple[float, float], new: tuple[float, float], relat
         else:
             why = "its sigma has grown: the noise factors have" if lost < 0 else "its sigma is the same"
     elif relation == SHARED:
-        why = "shared lines"
-    return ConstantChange(name, value_old, value_new, shift, sigma, why)
+        why = _WORDS[SHARED]
+    return ConstantChange(name, value_old, value_new, shift, sigma, sigma_old, sigma_new, why)
 
 
 def _sign(name: str, old: tuple[float, float], new: tuple[float, float]) -> SignMismatch | None:

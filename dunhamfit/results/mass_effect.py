@@ -42,12 +42,16 @@ class MassSlopes:
 def mass_slopes(fit: Fit) -> MassSlopes:
     """How the constants of `fit` would follow a change of each mass."""
     model, lines, design = fit.model, fit.lines, fit.design
-    names = [lines.isotopologues[code] for code in np.unique(lines.isotopologue[design.used])]
+    # One line for each row of the design: repeats of a transition move together.
+    leading = np.empty(design.rows.starts[len(fit.groups)], dtype=int)
+    leading[design.row_of] = design.used
+    lines = lines.subset(leading)
+    names = [lines.isotopologues[code] for code in np.unique(lines.isotopologue)]
     nuclides = nuclides_of(model, names)
-    changes = np.zeros((len(lines), len(nuclides)))
+    changes = np.zeros((len(design.rows.scale), len(nuclides)))
     rows = monomial_rows(model, lines)
     for name in names:
-        chosen = lines.isotopologue == lines.isotopologues.index(name)
+        chosen = np.flatnonzero(lines.isotopologue == lines.isotopologues.index(name))
         changes[chosen] = rows[chosen] @ factor_slopes(fit, name, nuclides)
     free = np.flatnonzero(~model.fixed)
     held = np.flatnonzero(model.fixed)
@@ -55,9 +59,7 @@ def mass_slopes(fit: Fit) -> MassSlopes:
     factors[: len(fit.groups)] = fit.noise.by_group
     slopes = np.zeros((len(fit.values), len(nuclides)))
     for column, change in enumerate(changes.T):
-        of_row = np.zeros(len(design.rows.scale))
-        of_row[design.row_of] = -change[design.used]
-        altered = replace(design.rows, observed=exact(of_row)).reweighted(factors)
+        altered = replace(design.rows, observed=exact(-change)).reweighted(factors)
         if fit.factor.shape[1] < len(free):
             # Relations between constants: the lines act only along the directions that these leave.
             gradient = altered.gradient(altered.observed)

@@ -35,12 +35,20 @@ class Parts:
     fit, calibration, masses : ndarray of float, shape (n,)
     model : ndarray of float, shape (n,), or None
         Spread over near-equal sets of terms; None where it was not asked for.
+    factor : ndarray of float, shape (n, q), cm-1
+        F with covariance F F^T of the differences, the model's part left out.
     """
 
     fit: np.ndarray
     calibration: np.ndarray
     masses: np.ndarray
     model: np.ndarray | None
+    factor: np.ndarray
+
+    @property
+    def covariance(self) -> np.ndarray:
+        """Shape (n, n), cm-2; the model's part is left out."""
+        return self.factor @ self.factor.T
 
     @property
     def total(self) -> np.ndarray:
@@ -123,11 +131,13 @@ def parts_of(fit: Fit, own: OwnConstants, upper: Levels, lower: Levels, selectio
         wide_rows = np.zeros((len(upper.v), len(wide.parameters)))
         wide_rows[:, : len(wide.constants)] = _columns(wide, name, upper, lower).high.T
         spread = selection.model_spread(wide_rows)
+    of_masses = rows @ own.mass_factor
     return Parts(
         fit=np.sqrt(of_fit),
         calibration=np.sqrt(of_calibration),
-        masses=np.sqrt(((rows @ own.mass_factor) ** 2).sum(axis=1)),
+        masses=np.sqrt((of_masses**2).sum(axis=1)),
         model=spread,
+        factor=np.hstack([slopes, of_masses]),
     )
 
 

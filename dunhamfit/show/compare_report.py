@@ -49,17 +49,18 @@ def _constants_table(comparison) -> Table:
         rows.append(
             (
                 item.name,
-                format_value(item.old, 0.0),
-                format_value(item.new, 0.0),
+                _value(item.old, item.sigma_old),
+                _value(item.new, item.sigma_new),
                 format_value(item.shift, item.sigma_shift) if known else format_number(item.shift, digits=3),
                 format_number(item.shift / item.sigma_shift, digits=2) if known and item.sigma_shift else "",
-                item.why,
+                # What the note under the table says of every constant is not repeated.
+                "" if item.why == comparison.words else item.why,
             )
         )
     columns = (
         Column("constant"),
-        Column("old", "decimal", "cm-1"),
-        Column("new", "decimal", "cm-1"),
+        Column("old(sigma)", "decimal", "cm-1"),
+        Column("new(sigma)", "decimal", "cm-1"),
         Column("shift(sigma)", "decimal", "cm-1"),
         Column("shift/sigma", "right"),
         Column("remark"),
@@ -71,6 +72,11 @@ def _constants_table(comparison) -> Table:
         if only:
             notes += (f"Only in the {who} set: {', '.join(name for name, _ in only)}.",)
     return Table(f"Constants: {comparison.old} (old) and {comparison.new} (new)", columns, tuple(rows), notes)
+
+
+def _value(value: float, sigma: float) -> str:
+    """Value(sigma), or the whole value where no sigma is known."""
+    return format_value(value, 0.0 if math.isnan(sigma) else sigma)
 
 
 def _lines_table(comparison) -> Table:

@@ -30,9 +30,13 @@ def predict_document(records: list, *, run: int, validity: Iterable = ()) -> dic
     return {**document, "validity": validity} if validity else document
 
 
-def levels_document(records: list, *, run: int, validity: Iterable = ()) -> dict[str, object]:
-    """The document that `levels --json` prints; `records` are those of the levels."""
+def levels_document(
+    records: list, *, run: int, validity: Iterable = (), covariance: object = None
+) -> dict[str, object]:
+    """The document that `levels --json` prints; `records` are those of the levels, `covariance` in cm-2."""
     document = {"run": run, "zero": "v = 0, J = 0 of each isotopologue", "levels": records}
+    if covariance is not None:
+        document["covariance"] = covariance
     validity = [asdict(item) for item in validity]
     return {**document, "validity": validity} if validity else document
 

@@ -46,3 +46,11 @@ def test_wavelengths_are_refused(archive, capsys):
     capsys.readouterr()
     assert main(["levels", str(archive), "--unit", "um"]) == 2
     assert "um" in capsys.readouterr().err
+
+
+def test_covariance_on_request(archive, capsys):
+    capsys.readouterr()
+    assert main(["levels", str(archive), "--vmax", "1", "--jmax", "2", "--json", "--covariance"]) == 0
+    document = json.loads(capsys.readouterr().out)
+    sigmas = [item["sigma"] for item in document["levels"]]
+    assert [row[i] ** 0.5 for i, row in enumerate(document["covariance"])] == pytest.approx(sigmas, rel=1e-9)

@@ -74,3 +74,14 @@ def test_records_and_wrong_use(fit):
         levels.records("um")
     with pytest.raises(UsageError, match="must be 0 or more"):
         energy_levels(fit, v_max=-1, j_max=3)
+
+
+def test_covariance_gives_the_sigma_of_every_difference(fit):
+    """Var(E1 - E2) = C11 - 2 C12 + C22, for the lines of 2-1."""
+    levels = energy_levels(fit, v_max=2, j_max=12, isotopologue="70Ge82Se")
+    covariance = levels.parts.covariance
+    place = {(v, j): i for i, (v, j) in enumerate(zip(levels.v.tolist(), levels.j.tolist(), strict=True))}
+    for record in predict(fit, v_upper=2, v_lower=1, j_max=11, isotopologue="70Ge82Se").records():
+        a, b = place[2, record["j_upper"]], place[1, record["j_lower"]]
+        variance = covariance[a, a] - 2 * covariance[a, b] + covariance[b, b]
+        assert variance**0.5 == pytest.approx(record["sigma"], rel=1e-6)
