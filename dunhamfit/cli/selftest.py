@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import os
 import secrets
-from concurrent.futures import ProcessPoolExecutor
-from contextlib import nullcontext
+from collections.abc import Iterator
+from concurrent.futures import Executor, ProcessPoolExecutor
+from contextlib import contextmanager
 from multiprocessing import get_context
 from pathlib import Path
 
@@ -36,7 +38,20 @@ def command(
     with open_archive(archive) as store:
         fit = store.latest() if run is None else store.load(run)
     seed = secrets.randbelow(2**32) if seed is None else seed
-    pool = nullcontext() if workers == 1 else ProcessPoolExecutor(workers, mp_context=get_context("spawn"))
-    with pool as executor, output.progress("simulated line lists") as report:
+    with _processes(workers) as executor, output.progress("simulated line lists") as report:
         found = coverage(fit, sets=sets, seed=seed, executor=executor, progress=report)
     output.result(coverage_document(found), coverage_tables(found))
+
+
+@contextmanager
+def _processes(workers: int) -> Iterator[Executor | None]:
+    """Processes that share the work; None where one is enough."""
+    if workers == 1:
+        yield None
+        return
+    # One process for each processor is all the parallel work there is: threads of the linear algebra under it
+    # would only wait for each other. New processes read this when they start.
+    for name in ("OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS", "OMP_NUM_THREADS"):
+        os.environ.setdefault(name, "1")
+    with ProcessPoolExecutor(workers, mp_context=get_context("spawn")) as pool:
+        yield pool

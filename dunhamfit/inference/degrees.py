@@ -31,11 +31,11 @@ def effective_degrees(fit: Fit) -> np.ndarray:
     UsageError
         For a fit whose parameters are tied to each other.
     """
+    weighted = weighted_triangles(fit)
     degrees = np.full(len(fit.values), np.inf)
     known = np.flatnonzero(fit.noise.determined)
     if not len(known):
         return degrees
-    weighted = weighted_triangles(fit)
     factor = covariance_factor(weighted.whole.r)
     leverage = np.zeros((len(known), len(factor), len(factor)))
     lines = np.zeros(len(known))

@@ -144,7 +144,7 @@ def leave_one_out(fit: Fit, by: str = "band") -> tuple[DroppedGroup, ...]:
     nuisance = [i for i, place in enumerate(weighted.free) if fit.model.parameters[place].source]
     found = leave_out(
         [*weighted.groups, *weighted.priors],
-        np.append(labels, [-1] * len(weighted.priors)),
+        np.concatenate([labels, np.full(len(weighted.priors), -1)]),
         nuisance=nuisance,
     )
     dropped = []

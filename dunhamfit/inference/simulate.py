@@ -4,7 +4,7 @@ Each set of lines is what the model says the lines could have been: calculated p
 the stated uncertainties times the noise factors, and for each source one offset and one scale
 error drawn from their priors (free ones stay as fitted). Priors of constants are measurements
 too: their values are drawn about the fitted constants. The sets are fitted as the lines were, so
-that the noise factors are estimated anew. (Parametric bootstrap: B. Efron and R. J. Tibshirani,
+that the noise factors are estimated anew, and by the same robust loss. (Parametric bootstrap: B. Efron and R. J. Tibshirani,
 An Introduction to the Bootstrap, 1993, section 6.5, from memory.)
 """
 
@@ -161,6 +161,7 @@ class _Campaign:
     values: np.ndarray
     sigma: np.ndarray
     policy: str
+    robust: str
 
 
 def _campaign(fit: Fit) -> _Campaign:
@@ -169,7 +170,7 @@ def _campaign(fit: Fit) -> _Campaign:
     sigma[fit.design.used] = lines.sigma[fit.design.used] * fit.noise.by_group[fit.design.group_of]
     # A plain dictionary of priors can be pickled.
     model = replace(fit.model, priors=dict(fit.model.priors))
-    return _Campaign(model, lines, fit.values, sigma, fit.noise.policy)
+    return _Campaign(model, lines, fit.values, sigma, fit.noise.policy, fit.robust)
 
 
 def _simulated(campaign: _Campaign, rng: np.random.Generator) -> LineList:
@@ -200,7 +201,8 @@ def _run(campaign: _Campaign, seeds: Sequence[np.random.SeedSequence]) -> list[t
         rng = np.random.default_rng(seed)
         lines = _simulated(campaign, rng)
         try:
-            fit = fit_model(_with_priors_redrawn(campaign, rng), lines, policy=campaign.policy)
+            model = _with_priors_redrawn(campaign, rng)
+            fit = fit_model(model, lines, policy=campaign.policy, robust=campaign.robust)
         except (CannotDetermine, NotConverged) as failure:
             found.append(str(failure))
             continue

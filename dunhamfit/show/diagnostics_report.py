@@ -178,7 +178,8 @@ def coverage_table(found: Coverage) -> Table:
     spread = " and ".join(f"{100 * sigma:.1f}" for sigma in found.covered_sigmas)
     notes = [
         f"Part of {found.sets} simulated line lists whose interval held the true constant, seed {found.seed}; "
-        f"by chance it spreads by {spread} %.",
+        f"by chance it spreads by {spread} %. The lists have the noise and the calibration errors that the fit "
+        "assumes: what it leaves out is not tested here.",
     ]
     student = float(found.factors[0].max())
     if student > 1.005:
