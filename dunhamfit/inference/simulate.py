@@ -4,8 +4,8 @@ Each set of lines is what the model says the lines could have been: calculated p
 the stated uncertainties times the noise factors, and for each source one offset and one scale
 error drawn from their priors (free ones stay as fitted). Priors of constants are measurements
 too: their values are drawn about the fitted constants. The sets are fitted as the lines were, so
-that the noise factors are estimated anew, and by the same robust loss. (Parametric bootstrap: B. Efron and R. J. Tibshirani,
-An Introduction to the Bootstrap, 1993, section 6.5, from memory.)
+that the noise factors are estimated anew, and by the same robust loss. (Parametric bootstrap: B.
+Efron and R. J. Tibshirani, An Introduction to the Bootstrap, 1993, section 6.5, from memory.)
 """
 
 from __future__ import annotations
