@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from reference.thirteen_terms import ISOTOPOLOGUE, SCALE_SIGMA, SOURCES, TERMS, campaign
 
-from dunhamfit.errors import UsageError
+from dunhamfit.errors import CannotDetermine, UsageError
 from dunhamfit.fit.model import Prior
 from dunhamfit.fit.solve import fit_lines
 from dunhamfit.inference.influence import PRIORS, calibration_share, influence
@@ -103,6 +103,21 @@ def test_shared_errors_that_rule_everything_are_seen():
 def test_no_calibration_terms_no_share():
     fit = fitted(campaign(np.random.default_rng(6), calibrated=False))
     assert not calibration_share(fit).any()
+
+
+@pytest.mark.parametrize(
+    ("kind", "named"),
+    [("scale", {f"scale[{name}]" for name in SOURCES}), ("offset", {f"offset[{SOURCES[2]}]"})],
+)
+def test_calibration_that_constants_could_take_over_is_refused_by_name(kind, named):
+    """A free scale on every source multiplies all constants; free offsets on all are made up for by Y10."""
+    lines = campaign(np.random.default_rng(6))
+    free = tuple(replace(source, **{kind: np.inf}) for source in lines.sources)
+    with pytest.raises(CannotDetermine) as refusal:
+        fitted(replace(lines, sources=free))
+    assert set(refusal.value.terms) == named
+    one_known = (lines.sources[0], *free[1:])
+    assert fitted(replace(lines, sources=one_known)).sigma(1, 0) > 0
 
 
 def test_wrong_use(fit):
