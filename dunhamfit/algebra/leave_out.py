@@ -19,15 +19,14 @@ from dataclasses import dataclass, fields
 
 import numpy as np
 from scipy.linalg import cholesky, qr, solve_triangular
+from scipy.linalg.lapack import dpocon, dpotrf, dtrtrs
 
 from dunhamfit.algebra.rank import judge
 from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge, solve
 
-# The identity is used where (I - S S^T)^-1 is no larger than this: it multiplies the rounding of S, which is some
-# eps times the condition of the rows.
-_LARGEST = 1e5
-# Keeps a group that alone determines a parameter from being singular to the last bit; far below any rounding of S.
-_NOT_SINGULAR = 1e-15
+# The identity is used where I - S S^T has at least this reciprocal condition: its inverse multiplies the rounding of
+# S, which is some eps times the condition of the rows.
+_SMALLEST = 1e-5
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,14 +80,18 @@ def leave_out(triangles, labels, *, nuisance=()) -> LeftOut:
     """
     triangles, labels = list(triangles), np.asarray(labels)
     base = triangles[0].base
-    groups = [_together(triangles, labels == g, base) for g in range(labels.max() + 1)]
-    always = [_together(triangles, labels < 0, base)] if np.any(labels < 0) else []
+    members = [[] for _ in range(labels.max() + 1)]
+    always = []
+    for label, item in zip(labels, triangles, strict=True):
+        (members[label] if label >= 0 else always).append(item)
+    groups = [_together(item, base) for item in members]
+    always = [_together(always, base)] if always else []
     whole = merge([*groups, *always], base)
-    cases, largest = _by_identity(groups, whole)
-    critical = np.flatnonzero(~(largest < _LARGEST))
-    if len(critical):
-        common = [*always, *(item for item, size in zip(groups, largest, strict=True) if size < _LARGEST)]
-        common = [merge(common, base)] if common else []
+    factor = covariance_factor(whole.r)
+    cases = [_by_identity(group, whole, factor) for group in groups]
+    critical = [g for g, case in enumerate(cases) if case is None]
+    common = [*always, *(group for group, case in zip(groups, cases, strict=True) if case is not None)]
+    common = [merge(common, base)] if common and critical else []
     for g in critical:
         rest = [*common, *(groups[h] for h in critical if h != g)]
         cases[g] = _by_merging(groups[g], rest, whole, np.asarray(nuisance, dtype=int))
@@ -112,41 +115,30 @@ class _Case:
     lost: tuple[int, ...] = ()
 
 
-def _together(triangles: list[Triangle], chosen: np.ndarray, base: np.ndarray) -> Triangle:
-    members = [triangles[i] for i in np.flatnonzero(chosen)]
-    return members[0].shifted(base) if len(members) == 1 else merge(members, base)
+def _together(members: list[Triangle], base: np.ndarray) -> Triangle:
+    if len(members) > 1:
+        return merge(members, base)
+    return members[0] if members[0].base is base else members[0].shifted(base)
 
 
-def _by_identity(groups: list[Triangle], whole: Triangle) -> tuple[list[_Case], np.ndarray]:
-    """Every group by the identity of the module, and the size of each (I - S S^T)^-1."""
-    tallest = max(len(item.z) for item in groups)
-    rows = np.zeros((len(groups), tallest, whole.parameters))
-    z = np.zeros((len(groups), tallest))
-    for g, item in enumerate(groups):
-        rows[g, : len(item.z)], z[g, : len(item.z)] = item.r, item.z
-    factor = covariance_factor(whole.r)
-    shares = rows @ factor
-    unit = np.eye(tallest)
-    rest = (1 + _NOT_SINGULAR) * unit - shares @ shares.transpose(0, 2, 1)
-    inverse = np.linalg.solve(rest, np.broadcast_to(unit, rest.shape))
-    residual = shares @ whole.z - z
-    predicted = np.matmul(inverse, residual[:, :, None])[:, :, 0]
-    reach = shares @ factor.T
-    values = solve(whole) + np.matmul(predicted[:, None, :], reach)[:, 0]
-    variances = (reach * (inverse @ reach)).sum(axis=1)
-    rss = np.array([item.rss for item in groups])
-    cases = [
-        _Case(*case)
-        for case in zip(
-            values,
-            np.sqrt(np.maximum(variances, 0.0)),
-            (predicted**2).sum(axis=1) + rss,
-            (residual * predicted).sum(axis=1) + rss,
-            [item.n for item in groups],
-            strict=True,
-        )
-    ]
-    return cases, np.sqrt((inverse**2).sum(axis=(1, 2)))
+def _by_identity(group: Triangle, whole: Triangle, factor: np.ndarray) -> _Case | None:
+    """One group by the identity of the module; None where I - S S^T is too close to singular."""
+    share = group.r @ factor
+    rest = np.eye(len(share)) - share @ share.T
+    lower, failed = dpotrf(rest, lower=1)
+    if failed or dpocon(lower, float(np.abs(rest).sum(axis=0).max()), uplo="L")[0] < _SMALLEST:
+        return None
+    residual = share @ whole.z - group.z
+    half = dtrtrs(lower, np.column_stack([residual, share @ factor.T]), lower=1)[0]
+    half_residual, half_reach = half[:, 0], half[:, 1:]
+    predicted = dtrtrs(lower, half_residual, lower=1, trans=1)[0]
+    return _Case(
+        solve(whole) + half_residual @ half_reach,
+        np.sqrt((half_reach**2).sum(axis=0)),
+        float(predicted @ predicted) + group.rss,
+        float(half_residual @ half_residual) + group.rss,
+        group.n,
+    )
 
 
 def _by_merging(group: Triangle, rest: list[Triangle], whole: Triangle, nuisance: np.ndarray) -> _Case:
