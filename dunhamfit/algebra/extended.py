@@ -105,38 +105,3 @@ def powers(base: Extended, highest: int) -> Extended:
         more = multiply(Extended(table.high[1:], table.low[1:]), Extended(table.high[-1], table.low[-1]))
         table = Extended(np.concatenate([table.high, more.high]), np.concatenate([table.low, more.low]))
     return Extended(table.high[: highest + 1], table.low[: highest + 1])
-
-
-def product_with(matrix: Extended, vector: Extended) -> Extended:
-    """matrix @ vector, summed as if in twice the precision.
-
-    Parameters
-    ----------
-    matrix : Extended, shape (p, n)
-        Given by columns of the product: the sum runs over the first axis.
-    vector : Extended, shape (p,)
-
-    Returns
-    -------
-    Extended, shape (n,)
-    """
-    weights = Extended(vector.high[:, None], vector.low[:, None])
-    products = multiply(matrix, weights)
-    return sum_first_axis(products)
-
-
-def sum_first_axis(terms: Extended) -> Extended:
-    """Sum over the first axis by pairwise halving, so that each level is one vectorised addition."""
-    high, low = terms
-    if not len(high):
-        zero = np.zeros(high.shape[1:])
-        return Extended(zero, zero)
-    while len(high) > 1:
-        half = len(high) // 2
-        summed = add(Extended(high[:half], low[:half]), Extended(high[half : 2 * half], low[half : 2 * half]))
-        if len(high) % 2:
-            high = np.concatenate([summed.high, high[-1:]])
-            low = np.concatenate([summed.low, low[-1:]])
-        else:
-            high, low = summed
-    return Extended(high[0], low[0])

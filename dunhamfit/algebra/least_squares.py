@@ -21,13 +21,12 @@ from scipy.linalg.lapack import dtrtrs
 
 from dunhamfit.algebra.extended import Extended
 from dunhamfit.algebra.rows import Rows
-from dunhamfit.algebra.triangle import Triangle, covariance_factor, reduce_rows
+from dunhamfit.algebra.triangle import covariance_factor
 from dunhamfit.errors import NotConverged
 
-# No constant moves by more of its own sigma than the length of the step, and 1e-6 is what is promised.
-# (Where the rows carry no real sigma, the rms residual takes its place.)
+# Steps go on for as long as they shrink. Then each constant must stand still to a millionth of its own
+# sigma, which is what is promised, or in its last places, which is all that float64 can hold.
 _STEP_IN_SIGMA = 1e-6
-# Or every constant stands still in its last places, which is all that float64 can hold.
 _LAST_PLACES = 4.0
 _ROUNDS = 20
 
@@ -53,17 +52,6 @@ class Solution:
     chi2: float
 
 
-def first_triangle(rows: Rows) -> Triangle:
-    """Triangle of all rows about zero: good for R, and for a first solution."""
-    return reduce_rows(
-        rows.whitened,
-        rows.observed.high * rows.scale,
-        np.zeros(rows.parameters),
-        n=int(rows.lines.sum()),
-        rss=float(rows.spread.sum()),
-    )
-
-
 def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
     """Least-squares solution by refinement from `start`.
 
@@ -81,18 +69,18 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
         or is singular to working precision.
     """
     values = np.array(start, dtype=float)
+    small = _STEP_IN_SIGMA * np.sqrt((covariance_factor(r) ** 2).sum(axis=1))
     last = np.inf
     for _ in range(_ROUNDS):
         residual = rows.residuals(values)
-        gradient = rows.gradient(residual)
-        half = dtrtrs(r, gradient, trans=1)[0]
+        half = dtrtrs(r, rows.gradient(residual), trans=1)[0]
         step = dtrtrs(r, half)[0]
         size = float(np.sqrt(half @ half))  # length of the step in units of sigma
-        if not size < last / 2:
+        settled = np.abs(step) <= np.maximum(small, _LAST_PLACES * np.spacing(np.abs(values)))
+        if not size < last / 2 and np.all(settled):
             break
         values, last = values + step, size
-    rms = np.sqrt(max(float(np.sum((residual.high * rows.scale) ** 2)), 1.0))
-    if not (size <= _STEP_IN_SIGMA * rms or np.all(np.abs(step) <= _LAST_PLACES * np.spacing(np.abs(values)))):
+    else:
         raise NotConverged(
             "the refinement of the least-squares solution did not settle; the model is close to undetermined",
             state={"step_in_sigma": size, "values": values},

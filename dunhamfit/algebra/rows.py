@@ -6,13 +6,13 @@ The exact product A x is needed because positions are up to 1e9 times their sigm
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 
-from dunhamfit.algebra.extended import Extended, exact, two_product
-from dunhamfit.algebra.slices import Slices
-from dunhamfit.algebra.triangle import Triangle, reduce_rows
+from dunhamfit.algebra.extended import Extended, exact, subtract, two_product
+from dunhamfit.algebra.matrix import Matrix
+from dunhamfit.algebra.triangle import Triangle, block_edges, reduce_blocks
 
 
 @dataclass(frozen=True, eq=False)
@@ -21,7 +21,7 @@ class Rows:
 
     Attributes
     ----------
-    matrix : Slices, shape (p, n)
+    matrix : Matrix, shape (p, n)
         One column of the design for each first index.
     observed : Extended, shape (n,)
     scale : ndarray of float, shape (n,)
@@ -36,7 +36,7 @@ class Rows:
         Sum of ln(sigma) over the lines of each group.
     """
 
-    matrix: Slices
+    matrix: Matrix
     observed: Extended
     scale: np.ndarray
     starts: np.ndarray
@@ -48,27 +48,30 @@ class Rows:
     def parameters(self) -> int:
         return self.matrix.shape[0]
 
-    @cached_property
+    @property
     def whitened(self) -> np.ndarray:
-        """Design rows divided by sigma, shape (n, p)."""
-        return (self.matrix.rounded * self.scale).T
+        """Design rows divided by sigma, shape (n, p), made anew at each call."""
+        return self._whitened(0, len(self.scale))
+
+    def _whitened(self, start: int, stop: int) -> np.ndarray:
+        return (self.matrix.rounded(start, stop) * self.scale[start:stop]).T
 
     def residuals(self, values: np.ndarray) -> Extended:
-        """y - A x to some 30 digits, shape (n,).
+        """y - A x to some 28 digits, shape (n,).
 
         Parameters
         ----------
         values : ndarray of float, shape (p,)
         """
-        return self.matrix.less_product(self.observed, values)
+        return subtract(self.observed, self.product(values))
 
     def product(self, values: np.ndarray) -> Extended:
-        """A x to some 30 digits, shape (n,)."""
-        return self.matrix.less_product(exact(np.zeros_like(self.scale)), -values)
+        """A x to some 28 digits, shape (n,)."""
+        return self.matrix.transposed_product(values)
 
     def gradient(self, residual: Extended) -> np.ndarray:
         """A^T W r for the residuals r, W = 1 / sigma^2, to well beyond double precision, shape (p,)."""
-        return self.matrix.product_with(_weighted(residual, self.scale))
+        return self.matrix.product(_weighted(residual, self.scale))
 
     def held(self, columns, values) -> Rows:
         """The rows of the model in which `columns` are fixed at `values` and taken to the left side."""
@@ -88,20 +91,36 @@ class Rows:
             log_sigma=self.log_sigma + self.lines * np.log(factors),
         )
 
+    def triangle(self) -> Triangle:
+        """One triangle of all rows about zero."""
+        whitened = self.observed.high * self.scale
+        return reduce_blocks(
+            self._blocks(0, len(self.scale), whitened),
+            np.zeros(self.parameters),
+            n=int(self.lines.sum()),
+            rss=float(self.spread.sum()),
+            log_sigma=float(self.log_sigma.sum()),
+        )
+
     def triangles(self, base: np.ndarray) -> tuple[Triangle, ...]:
         """The triangle of each group about `base`, shape (p,)."""
-        residual = self.residuals(base).high * self.scale
+        whitened = self.residuals(base).high * self.scale
         return tuple(
-            reduce_rows(
-                self.whitened[start:stop],
-                residual[start:stop],
+            reduce_blocks(
+                self._blocks(start, stop, whitened),
                 base,
                 n=int(self.lines[g]),
                 rss=float(self.spread[g]),
                 log_sigma=float(self.log_sigma[g]),
             )
-            for g, (start, stop) in enumerate(zip(self.starts[:-1], self.starts[1:], strict=True))
+            for g, (start, stop) in enumerate(pairwise(self.starts))
         )
+
+    def _blocks(self, start: int, stop: int, residual: np.ndarray):
+        """Whitened rows and residuals, a block at a time: the whole design is never held."""
+        edges = block_edges(start, stop, self.parameters)
+        for low, high in pairwise(edges):
+            yield self._whitened(low, high), residual[low:high]
 
 
 def plain_rows(matrix, observed, sigma=None) -> Rows:
@@ -118,7 +137,7 @@ def plain_rows(matrix, observed, sigma=None) -> Rows:
     count = len(matrix.high)
     sigma = np.ones(count) if sigma is None else np.asarray(sigma, dtype=float)
     return Rows(
-        matrix=Slices.of(matrix.T),
+        matrix=Matrix.plain(matrix.T),
         observed=observed if isinstance(observed, Extended) else exact(observed),
         scale=1.0 / sigma,
         starts=np.array([0, count]),

@@ -12,9 +12,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from dunhamfit.algebra.extended import Extended, exact, multiply, powers, product_with, subtract, two_sum
+from dunhamfit.algebra.extended import Extended, exact, multiply, powers, two_sum
+from dunhamfit.algebra.matrix import Matrix
 from dunhamfit.algebra.rows import Rows
-from dunhamfit.algebra.slices import Slices, beside
 from dunhamfit.errors import CannotDetermine
 from dunhamfit.fit.model import Model
 from dunhamfit.lines.line_list import LineList
@@ -81,17 +81,17 @@ def build_design(model: Model, lines: LineList, line_weights: np.ndarray | None 
     used = np.flatnonzero(lines.used)
     if not len(used):
         raise CannotDetermine("no line is used: every line is excluded, or the list is empty")
-    groups, group_of = _group(lines, used)
-    order, firsts, row_of = _pool(lines, used, group_of)
+    order, firsts, row_of = _pool(lines, used)
     leading = used[order[firsts]]
+    groups, starts = _group(lines, leading, np.diff(firsts, append=len(used)))
+    group_of = np.repeat(np.arange(len(groups)), np.diff(starts))[row_of]
     weights = 1.0 / lines.sigma[used] ** 2
     if line_weights is not None:
         weights = weights * line_weights[used]
     observed, scale, spread = _pooled(lines.position[used], weights, order, firsts, row_of)
-    starts = np.searchsorted(group_of[order[firsts]], np.arange(len(groups) + 1))
     count = len(groups)
     rows = Rows(
-        matrix=_columns(model, lines, leading, observed.high),
+        matrix=_matrix(model, lines, leading, observed.high),
         observed=observed,
         scale=scale,
         starts=starts,
@@ -123,15 +123,7 @@ def calculate(model: Model, lines: LineList, values: np.ndarray) -> Extended:
             part = calculate(model, lines.subset(known), values)
             total.high[known], total.low[known] = part.high, part.low
         return total
-    levels, upper, lower = _levels(lines, np.arange(len(lines)))
-    constants = len(model.constants)
-    energy = product_with(level_columns(model, lines.isotopologues, *levels), exact(values[:constants]))
-    line = subtract(energy.take(upper), energy.take(lower))
-    calibration = np.zeros(len(lines))
-    for parameter, value in zip(model.parameters[constants:], values[constants:], strict=True):
-        calibration += value * _calibration_column(parameter, lines, slice(None), lines.position)
-    total = two_sum(line.high, calibration)
-    return two_sum(total.high, total.low + line.low)
+    return _matrix(model, lines, np.arange(len(lines)), lines.position).transposed_product(values)
 
 
 def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
@@ -151,12 +143,12 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     constants = model.constants
     k = np.array([item.k for item in constants])
     l = np.array([item.l for item in constants])
-    # 2v + 1 and J(J + 1) are whole numbers and their powers exact in 106 bits; the halves come out at the end.
-    vibration = powers(exact(2 * v + 1.0), int(k.max()))
-    rotation = powers(exact(j * (j + 1.0)), int(l.max()))
-    product = multiply(vibration.take(k, axis=0), rotation.take(l, axis=0))
+    # 2v + 1 and J(J + 1) are whole numbers, whose powers are exact to 106 bits; so are the halves.
+    vibration = powers(exact(2.0 * np.arange(v.max() + 1) + 1.0), int(k.max())).take(k, axis=0)
+    rotation = powers(exact(np.arange(j.max() + 1) * np.arange(1.0, j.max() + 2)), int(l.max())).take(l, axis=0)
     halves = np.ldexp(1.0, -k)[:, None]
-    product = Extended(product.high * halves, product.low * halves)
+    vibration = Extended(vibration.high * halves, vibration.low * halves)
+    product = multiply(vibration.take(v), rotation.take(j))
     present = np.flatnonzero(np.bincount(code, minlength=len(isotopologues)))
     factors = np.zeros((len(constants), 2, len(isotopologues)))
     for index in present:
@@ -167,44 +159,46 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     return multiply(product, Extended(factors[:, 0], factors[:, 1]))
 
 
-def _group(lines: LineList, used: np.ndarray) -> tuple[Groups, np.ndarray]:
-    v_upper, v_lower = lines.v_upper[used], lines.v_lower[used]
-    isotopologue, source = lines.isotopologue[used], lines.source[used]
-    width = int(max(v_upper.max(), v_lower.max())) + 1
-    key = ((source.astype(np.int64) * len(lines.isotopologues) + isotopologue) * width + v_upper) * width + v_lower
-    index, number = _renumber(key)
-    rest, lower = np.divmod(index, width)
-    rest, upper = np.divmod(rest, width)
-    source, isotopologue = np.divmod(rest, len(lines.isotopologues))
-    return Groups(source, isotopologue, upper, lower, np.bincount(number)), number
-
-
-def _renumber(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Distinct keys in ascending order, and the number of each entry among them.
-
-    A table over the range of keys where that is short, which is much faster than sorting.
-    """
-    low = int(key.min())
-    span = int(key.max()) - low + 1
-    if span > 4 * len(key) + 1_000_000:
-        return np.unique(key, return_inverse=True)
-    present = np.zeros(span, dtype=bool)
-    present[key - low] = True
-    number = np.cumsum(present) - 1
-    return np.flatnonzero(present) + low, number[key - low]
-
-
-def _pool(lines: LineList, used: np.ndarray, group_of: np.ndarray):
+def _pool(lines: LineList, used: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     """Order of the used lines by group and transition, first line of each transition, row of each line."""
-    width = int(max(lines.j_upper[used].max(), lines.j_lower[used].max())) + 1
-    key = (group_of * width + lines.j_upper[used]) * width + lines.j_lower[used]
+    v_upper, v_lower = lines.v_upper[used], lines.v_lower[used]
+    j_upper, j_lower = lines.j_upper[used], lines.j_lower[used]
+    v_width = int(max(v_upper.max(), v_lower.max())) + 1
+    j_width = int(max(j_upper.max(), j_lower.max())) + 1
+    key = lines.source[used].astype(np.int64) * len(lines.isotopologues) + lines.isotopologue[used]
+    for column, width in ((v_upper, v_width), (v_lower, v_width), (j_upper, j_width), (j_lower, j_width)):
+        key *= width
+        key += column
     order = np.argsort(key, kind="stable")
-    ordered = key[order]
-    new = np.ones(len(order), dtype=bool)
-    new[1:] = ordered[1:] != ordered[:-1]
+    new = _changes(key[order])
     row_of = np.empty(len(order), dtype=np.int64)
     row_of[order] = np.cumsum(new) - 1
     return order, np.flatnonzero(new), row_of
+
+
+def _group(lines: LineList, leading: np.ndarray, repeats: np.ndarray) -> tuple[Groups, np.ndarray]:
+    """Groups of the rows, which are in the order of groups, and where they start and end.
+
+    Parameters
+    ----------
+    leading : ndarray of int, shape (rows,)
+        First line of each row.
+    repeats : ndarray of int, shape (rows,)
+        Number of lines of each row.
+    """
+    columns = tuple(item[leading] for item in (lines.source, lines.isotopologue, lines.v_upper, lines.v_lower))
+    firsts = np.flatnonzero(_changes(*columns))
+    groups = Groups(*(item[firsts] for item in columns), lines=np.add.reduceat(repeats, firsts))
+    return groups, np.append(firsts, len(leading))
+
+
+def _changes(*columns: np.ndarray) -> np.ndarray:
+    """Mask of the entries that differ from the one before in any column; the first one always does."""
+    new = np.zeros(len(columns[0]), dtype=bool)
+    new[:1] = True
+    for column in columns:
+        new[1:] |= column[1:] != column[:-1]
+    return new
 
 
 def _pooled(position, weights, order, firsts, row_of) -> tuple[Extended, np.ndarray, np.ndarray | None]:
@@ -237,19 +231,28 @@ def _levels(lines: LineList, chosen: np.ndarray):
     return (code, v, j), number[: len(chosen)], number[len(chosen) :]
 
 
-def _columns(model: Model, lines: LineList, leading: np.ndarray, observed: np.ndarray) -> Slices:
+def _renumber(key: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Distinct keys in ascending order, and the number of each entry among them.
+
+    A table over the range of keys where that is short, which is much faster than sorting.
+    """
+    span = int(key.max()) + 1
+    if span > 4 * len(key) + 1_000_000:
+        return np.unique(key, return_inverse=True)
+    present = np.zeros(span, dtype=bool)
+    present[key] = True
+    return np.flatnonzero(present), (np.cumsum(present) - 1)[key]
+
+
+def _matrix(model: Model, lines: LineList, leading: np.ndarray, observed: np.ndarray) -> Matrix:
     """Design columns of the lines `leading`, shape (p, rows)."""
     levels, upper, lower = _levels(lines, leading)
-    table = level_columns(model, lines.isotopologues, *levels)
-    # Room for the rows of priors, and slices of one width for what is joined below.
-    longest = max(*table.shape, len(leading) + len(model.parameters))
-    constants = Slices.of(table, longest).difference(upper, lower)
     calibration = model.parameters[len(model.constants) :]
-    if not calibration:
-        return constants
+    own = np.empty((len(calibration), len(leading)))
     # The scale multiplies the observed position: the difference from the true one is of second order.
-    extra = np.stack([_calibration_column(item, lines, leading, observed) for item in calibration])
-    return beside(constants, Slices.of(exact(extra), longest))
+    for index, parameter in enumerate(calibration):
+        own[index] = _calibration_column(parameter, lines, leading, observed)
+    return Matrix.of_levels(level_columns(model, lines.isotopologues, *levels), upper, lower, own)
 
 
 def _calibration_column(parameter, lines: LineList, chosen, position: np.ndarray) -> np.ndarray:
@@ -268,7 +271,7 @@ def _with_priors(model: Model, rows: Rows) -> Rows:
     value = np.array([prior.value for _, prior in priors])
     sigma = np.array([prior.sigma for _, prior in priors])
     return Rows(
-        matrix=rows.matrix.and_columns(extra),
+        matrix=rows.matrix.with_lines(extra),
         observed=Extended(
             np.concatenate([rows.observed.high, value]),
             np.concatenate([rows.observed.low, np.zeros_like(value)]),

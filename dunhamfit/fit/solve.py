@@ -10,7 +10,7 @@ import numpy as np
 from scipy.linalg import cholesky
 
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
-from dunhamfit.algebra.least_squares import Solution, first_triangle, refine, sharpened
+from dunhamfit.algebra.least_squares import Solution, refine, sharpened
 from dunhamfit.algebra.rank import Rank
 from dunhamfit.algebra.robust import loss
 from dunhamfit.algebra.rows import Rows
@@ -115,7 +115,7 @@ def fit_model(model: Model, lines: LineList, *, policy: str = "stated", robust: 
     check_structure(model, lines, design)
     given = np.array([0.0 if (p := model.prior(item)) is None else p.value for item in model.parameters])
     rows = _free_rows(model, design, given)
-    start = first_triangle(rows)
+    start = rows.triangle()
     rank = check_rank(model, start.r)
     solution = refine(rows, start.r, solve(start))
     if robust == "none":
@@ -163,7 +163,7 @@ def _plain(
     if policy != "stated":
         noise, allowance = estimate(policy, rows.triangles(solution.values), design.groups, lines)
         weighted = rows.reweighted(_row_factors(noise, rows))
-        solution = refine(weighted, first_triangle(weighted).r, solution.values)
+        solution = refine(weighted, weighted.triangle().r, solution.values)
     likelihood = log_likelihood(solution.chi2, int(rows.lines.sum()), float(weighted.log_sigma.sum()))
     factor = _factor(weighted, solution, rank, allowance)
     return _Outcome(solution.values, factor, solution.residuals.high, noise, likelihood, design)
@@ -172,7 +172,7 @@ def _plain(
 def _reweighted(model: Model, lines: LineList, rows: Rows, given: np.ndarray, found: Reweighted) -> _Outcome:
     design = build_design(model, lines, found.line_weights)
     weighted = _free_rows(model, design, given).reweighted(_row_factors(found.noise, rows))
-    values = refine(weighted, first_triangle(weighted).r, found.values).values
+    values = refine(weighted, weighted.triangle().r, found.values).values
     residual = rows.residuals(values).high
     return _Outcome(
         values, found.factor, residual, found.noise, found.log_likelihood, design, found.line_weights
