@@ -24,8 +24,8 @@ from dunhamfit.algebra.rows import Rows
 from dunhamfit.algebra.triangle import covariance_factor
 from dunhamfit.errors import NotConverged
 
-# Steps go on for as long as they shrink. Then each constant must stand still to a millionth of its own
-# sigma, which is what is promised, or in its last places, which is all that float64 can hold.
+# Steps go on for as long as they shrink and change anything. Then each constant must stand still to a
+# millionth of its own sigma, which is what is promised, or in its last places, all that float64 can hold.
 _STEP_IN_SIGMA = 1e-6
 _LAST_PLACES = 4.0
 _ROUNDS = 20
@@ -76,10 +76,11 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
         half = dtrtrs(r, rows.gradient(residual), trans=1)[0]
         step = dtrtrs(r, half)[0]
         size = float(np.sqrt(half @ half))  # length of the step in units of sigma
-        settled = np.abs(step) <= np.maximum(small, _LAST_PLACES * np.spacing(np.abs(values)))
-        if not size < last / 2 and np.all(settled):
+        settled = np.all(np.abs(step) <= np.maximum(small, _LAST_PLACES * np.spacing(np.abs(values))))
+        moved = values + step
+        if settled and (size > last / 2 or np.array_equal(moved, values)):
             break
-        values, last = values + step, size
+        values, last = moved, size
     else:
         raise NotConverged(
             "the refinement of the least-squares solution did not settle; the model is close to undetermined",

@@ -1,0 +1,1 @@
+"""Published reference numbers, typed in with their sources; never our own earlier output."""
