@@ -13,7 +13,8 @@ round. A scale is instead that of the middle of its residuals,
 with the bisquare b(u) = (1 - u^2/36)^2 for |u| < 6 and 0 beyond: a line beyond 6 f sigma does not
 count at all. beta = E[b u^2]/E[b] makes it unbiased for normal noise, of which it uses 96 % of the
 information; 1 - h is what the fit leaves of the variance of the group. It starts from the median
-residual, and weights and parameters meanwhile are those of Huber's loss, whose sum has one minimum
+residual, first of all lines together, or a few lines without a scale of their own would rule while those
+of the others are large. Weights and parameters meanwhile are those of Huber's loss, whose sum has one minimum
 only and which a line 1e6 sigma off pulls no more than one a few sigma off. (Scales by weighted
 squares: F. Mosteller and J. W. Tukey, Data Analysis and Regression, 1977, from memory; the form
 for fits is derived here.)
@@ -97,6 +98,15 @@ class Problem:
     @property
     def count(self) -> int:
         return len(self.sizes)
+
+    def pooled(self) -> Problem:
+        """The same lines with one noise factor."""
+        return replace(
+            self,
+            label=np.zeros_like(self.label),
+            sizes=np.array([len(self.label)]),
+            grams=np.stack([self.grams[:-1].sum(axis=0), self.grams[-1]]),
+        )
 
     def residuals(self, at: np.ndarray) -> np.ndarray:
         """Residuals of the lines over their stated uncertainties, shape (n_used,)."""

@@ -94,17 +94,21 @@ def reweight(design: Design, rows: Rows, solution: Solution, *, loss: Loss, poli
     else:
         label, names = factor_labels(policy, design.groups, lines)
     problem = _problem(design, rows, solution, label, lines)
-    values = solution.values
     least = 1.0 if policy == "common" else _LEAST_DEGREES
-    start = State(np.zeros(problem.basis.shape[1]), np.ones(problem.count), np.full(problem.count, policy != "stated"))
-    near, first = find_scales(problem, start, least, by_median=True)
+    estimated = policy != "stated"
+    start = State(np.zeros(problem.basis.shape[1]), np.ones(1), np.array([estimated]))
+    near, rounds = find_scales(problem.pooled(), start, least, by_median=True)
+    near = State(near.at, np.repeat(near.factors, problem.count), np.full(problem.count, estimated))
+    if problem.count > 1:
+        near, further = find_scales(problem, near, least, by_median=True)
+        rounds += further
     # Far from the solution residuals of 1e9 sigma leave rounding in those of all lines: count them anew from here.
-    values = values + solve_triangular(solution.r, near.at)
+    values = solution.values + solve_triangular(solution.r, near.at)
     line_residuals, prior_residuals = _residuals(design, rows, rows.residuals(values).high, lines)
     problem = replace(problem, start=line_residuals, prior_start=prior_residuals)
     near = replace(near, at=np.zeros_like(near.at))
-    state, second = find_scales(problem, near, least, by_median=False)
-    state, third = descend(problem, state, loss)
+    state, further = find_scales(problem, near, least, by_median=False)
+    state, last = descend(problem, state, loss)
     u = problem.residuals(state.at) / state.factors[problem.label]
     weights = np.ones(len(lines))
     weights[design.used] = loss.weight(u)
@@ -123,7 +127,7 @@ def reweight(design: Design, rows: Rows, solution: Solution, *, loss: Loss, poli
             - (prior @ prior + len(prior) * np.log(2 * np.pi)) / 2
             - prior_log_sigma
         ),
-        rounds=first + second + third,
+        rounds=rounds + further + last,
     )
 
 
