@@ -9,11 +9,13 @@ import click
 from dunhamfit.archive.store import open_archive
 from dunhamfit.cli.output import Output, json_option, quiet_option
 from dunhamfit.fit.record import Fit
+from dunhamfit.inference.ledger import make_ledger
 from dunhamfit.job.run import fit_job, read_job_lines
 from dunhamfit.job.tables import Job, read_job
 from dunhamfit.lines.faults import raise_faults
 from dunhamfit.show.documents import fit_document
 from dunhamfit.show.fit_report import fit_tables
+from dunhamfit.show.ledger_report import ledger_document, ledger_tables
 
 
 @click.command()
@@ -45,6 +47,8 @@ def run_fit(job: Job, archive: Path | None, output: Output) -> Fit:
         run = store.save(fit, job_text=job.text, title=job.title, parent=parent, notices=reading.notices)
     for text in fit.warnings:
         output.warn(text)
-    output.result(fit_document(fit, run=run, parent=parent, notices=reading.notices), fit_tables(fit))
+    ledger = make_ledger(fit, refit=lambda lines: fit_job(job, lines))
+    document = fit_document(fit, run=run, parent=parent, notices=reading.notices)
+    output.result(document | {"ledger": ledger_document(ledger)}, (*fit_tables(fit), *ledger_tables(ledger)))
     output.remark(f"run {run} stored in {path}")
     return fit

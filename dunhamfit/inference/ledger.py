@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from dunhamfit.errors import CannotDetermine, NotConverged
 from dunhamfit.fit.record import Fit
 from dunhamfit.fit.solve import fit_model
 from dunhamfit.inference.diagnosis import Diagnosis, diagnose
@@ -121,7 +122,7 @@ class Ledger:
         """The rule in words."""
         return (
             "A line is listed if its studentised residual against a fit of the lines not listed has a probability "
-            f"below {self.level:g}/{self.tested} (beyond {self.limit:.2f} sigma for a known uncertainty), so that "
+            f"below {self.level:g}/{self.tested + self.untested} (beyond {self.limit:.2f} sigma for a known uncertainty), so that "
             f"lines without an error give any entry in {self.level:.0%} of cases. Nothing was excluded."
         )
 
@@ -142,23 +143,19 @@ def make_ledger(fit: Fit, *, level: float = LEVEL, refit: Callable[[LineList], F
     -------
     Ledger
     """
-    lines, robust = fit.lines, fit.robust != "none"
-
-    def plain(others: LineList) -> Fit:
-        return fit_model(fit.model, others, policy=fit.noise.policy)
-
+    lines, policy, robust = fit.lines, fit.noise.policy, fit.robust != "none"
+    refit = refit or (lambda others: fit_model(fit.model, others, policy=policy, robust=fit.robust))
+    plain = (lambda others: fit_model(fit.model, others, policy=policy)) if robust else refit
     by_row = _excluded_by_row(lines)
     judged = studentise(fit, by_row)
-    found = search(fit, judged, by_row, level=level, refit=plain if robust or refit is None else refit)
-    shifts: tuple[Shift, ...] = ()
+    found = search(fit, judged, by_row, level=level, refit=plain)
+    shifts, remark = (), found.remark
     if found.without is not None and found.listed.any():
-        without = found.without
-        if robust:
-            others = lines.excluded(found.listed, REASON)
-            without = (
-                refit(others) if refit else fit_model(fit.model, others, policy=fit.noise.policy, robust=fit.robust)
-            )
-        shifts = _shifts(fit, without)
+        try:
+            without = refit(lines.excluded(found.listed, REASON)) if robust else found.without
+            shifts = _shifts(fit, without)
+        except (CannotDetermine, NotConverged) as error:
+            remark = f"the same fit cannot be made without the listed lines: {error}"
     tested = int((lines.used & np.isfinite(found.judged.p)).sum())
     return Ledger(
         entries=_entries(fit, judged, found),
@@ -172,7 +169,7 @@ def make_ledger(fit: Fit, *, level: float = LEVEL, refit: Callable[[LineList], F
         level=level,
         limit=limit(fit, level),
         settled=found.settled,
-        remark=found.remark,
+        remark=remark,
     )
 
 
