@@ -33,9 +33,7 @@ def energy(code, v, j):
     mass = np.array([[MASSES[name[:4]], MASSES[name[4:]]] for name in ISOTOPOLOGUES])
     reduced = mass.prod(axis=1) / mass.sum(axis=1)
     rho = np.sqrt(reduced[0] / reduced)[code]
-    return sum(
-        rho ** (k + 2 * l) * value * (v + 0.5) ** k * (j * (j + 1.0)) ** l for (k, l), value in TRUTH.items()
-    )
+    return sum(rho ** (k + 2 * l) * value * (v + 0.5) ** k * (j * (j + 1.0)) ** l for (k, l), value in TRUTH.items())
 
 
 def printed(position: np.ndarray, source: np.ndarray) -> np.ndarray:
@@ -107,8 +105,7 @@ def plant(lines: LineList, kind: str, rng: np.random.Generator) -> tuple[LineLis
 
 def _true(lines: LineList, index: int) -> float:
     code, v_upper, j_upper, v_lower, j_lower = (
-        int(getattr(lines, name)[index])
-        for name in ("isotopologue", "v_upper", "j_upper", "v_lower", "j_lower")
+        int(getattr(lines, name)[index]) for name in ("isotopologue", "v_upper", "j_upper", "v_lower", "j_lower")
     )
     return energy(code, v_upper, j_upper) - energy(code, v_lower, j_lower)
 
