@@ -105,11 +105,12 @@ def search(
             if found is not None and not _swollen(found.without, found.judged):
                 return found
     try:
-        found = _stand_still(fit, _candidates(fit, level), others, level, refit, _ROUNDS)
+        listed = _candidates(fit, level)
+        found = _stand_still(fit, listed, others, level, refit, _ROUNDS)
     except (CannotDetermine, NotConverged) as error:
         remark = f"the lines listed cannot be left out, so that a fit that they pull has judged them: {error}"
         return Search(listed, judged, remark=remark)
-    return found or Search(listed, judged, settled=False)
+    return found or Search(_large(fit, judged, level), judged, settled=False)
 
 
 def _suspicious(fit: Fit, judged: Studentised, level: float) -> bool:
