@@ -63,8 +63,8 @@ def _fast_two_sum(a, b) -> Extended:
 
 
 def _halves(a):
-    spread = _SPLITTER * a
-    upper = spread - (spread - a)
+    upper = _SPLITTER * a
+    upper -= upper - a
     return upper, a - upper
 
 
@@ -73,7 +73,11 @@ def two_product(a, b) -> Extended:
     product = a * b
     a_upper, a_lower = _halves(a)
     b_upper, b_lower = _halves(b)
-    error = ((a_upper * b_upper - product) + a_upper * b_lower + a_lower * b_upper) + a_lower * b_lower
+    error = a_upper * b_upper
+    error -= product
+    error += a_upper * b_lower
+    error += a_lower * b_upper
+    error += a_lower * b_lower
     return Extended(product, error)
 
 
@@ -92,9 +96,9 @@ def subtract(a: Extended, b: Extended) -> Extended:
 def multiply(a: Extended, b: Extended) -> Extended:
     """a * b; relative error about 2^-102."""
     product, error = two_product(a.high, b.high)
-    if not (a.low.any() or b.low.any()):
-        return Extended(product, error)
-    return _fast_two_sum(product, error + (a.high * b.low + a.low * b.high))
+    error += a.high * b.low
+    error += a.low * b.high
+    return _fast_two_sum(product, error)
 
 
 def powers(base: Extended, highest: int) -> Extended:

@@ -83,13 +83,14 @@ class Matrix:
     def rounded(self, start: int, stop: int) -> np.ndarray:
         """Every entry of some lines as the nearest float or its neighbour, shape (p, stop - start)."""
         plus, minus = self.plus[start:stop], self.minus[start:stop]
-        leading, rest = self.table.leading, self.table.rest
-        # The difference of the leading slices is exact, so that nothing is lost where levels nearly cancel.
-        shared = leading.take(plus, axis=1) - leading.take(minus, axis=1)
-        shared += rest.take(plus, axis=1) - rest.take(minus, axis=1)
-        own = self.own.leading[:, start:stop] + self.own.rest[:, start:stop]
-        exponent = np.concatenate([self.table.exponent, self.own.exponent])
-        return np.concatenate([shared, own]) * np.ldexp(1.0, exponent)[:, None]
+        table, own = self.table.joined, self.own.joined
+        entries = np.empty((self.shape[0], stop - start))
+        shared, others = entries[: len(table.high)], entries[len(table.high) :]
+        # The difference of joined slices is exact, so that nothing is lost where levels nearly cancel.
+        np.subtract(table.high.take(plus, axis=1), table.high.take(minus, axis=1), out=shared)
+        shared += table.low.take(plus, axis=1) - table.low.take(minus, axis=1)
+        np.add(own.high[:, start:stop], own.low[:, start:stop], out=others)
+        return entries
 
     def transposed_product(self, values: np.ndarray) -> Extended:
         """matrix^T values to some 28 digits of its largest term, shape (n,).

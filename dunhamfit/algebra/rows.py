@@ -54,7 +54,9 @@ class Rows:
         return self._whitened(0, len(self.scale))
 
     def _whitened(self, start: int, stop: int) -> np.ndarray:
-        return (self.matrix.rounded(start, stop) * self.scale[start:stop]).T
+        entries = self.matrix.rounded(start, stop)
+        entries *= self.scale[start:stop]
+        return entries.T
 
     def residuals(self, values: np.ndarray) -> Extended:
         """y - A x to some 28 digits, shape (n,).

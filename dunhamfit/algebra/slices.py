@@ -51,9 +51,10 @@ class Slices:
         return self.first, self.second, self.rest
 
     @cached_property
-    def leading(self) -> np.ndarray:
-        """The two slices joined, exact, shape (p, m): the entries are 2^exponent_i (leading + rest)_ij."""
-        return self.first + self.second
+    def joined(self) -> Extended:
+        """The matrix itself: the two slices joined, which is exact, and the rest."""
+        scale = np.ldexp(1.0, self.exponent)[:, None]
+        return Extended(scale * (self.first + self.second), scale * self.rest)
 
     def with_columns(self, more: np.ndarray) -> Slices:
         """The matrix with further columns, given as floats, shape (p, more)."""
@@ -123,7 +124,11 @@ def _cut(high: np.ndarray, low: np.ndarray, bits: int) -> tuple[np.ndarray, np.n
     """Cut numbers of size up to 1 into two slices of `bits` bits each and the rest."""
     first_unit = 1.5 * 2.0 ** (52 - bits)
     second_unit = 1.5 * 2.0 ** (52 - 2 * bits)
-    first = (high + first_unit) - first_unit
+    first = high + first_unit
+    first -= first_unit
     rest = high - first
-    second = (rest + second_unit) - second_unit
-    return first, second, (rest - second) + low
+    second = rest + second_unit
+    second -= second_unit
+    rest -= second
+    rest += low
+    return first, second, rest

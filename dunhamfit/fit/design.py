@@ -143,12 +143,11 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
     constants = model.constants
     k = np.array([item.k for item in constants])
     l = np.array([item.l for item in constants])
-    # 2v + 1 and J(J + 1) are whole numbers, whose powers are exact to 106 bits; so are the halves.
-    vibration = powers(exact(2.0 * np.arange(v.max() + 1) + 1.0), int(k.max())).take(k, axis=0)
-    rotation = powers(exact(np.arange(j.max() + 1) * np.arange(1.0, j.max() + 2)), int(l.max())).take(l, axis=0)
-    halves = np.ldexp(1.0, -k)[:, None]
-    vibration = Extended(vibration.high * halves, vibration.low * halves)
-    product = multiply(vibration.take(v), rotation.take(j))
+    # v + 1/2 and J(J + 1) are exact, and so are their powers up to 106 bits: one table serves both.
+    count = int(v.max()) + 1
+    base = np.concatenate([np.arange(count) + 0.5, np.arange(j.max() + 1) * np.arange(1.0, j.max() + 2)])
+    power = powers(exact(base), int(max(k.max(), l.max())))
+    product = multiply(power.take(k, axis=0).take(v), power.take(l, axis=0).take(count + j))
     present = np.flatnonzero(np.bincount(code, minlength=len(isotopologues)))
     factors = np.zeros((len(constants), 2, len(isotopologues)))
     for index in present:

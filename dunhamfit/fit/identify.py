@@ -12,7 +12,7 @@ import numpy as np
 
 from dunhamfit.algebra.rank import Rank, judge
 from dunhamfit.errors import CannotDetermine
-from dunhamfit.fit.design import Design
+from dunhamfit.fit.design import Design, Groups
 from dunhamfit.fit.model import Model
 from dunhamfit.lines.line_list import LineList
 
@@ -25,11 +25,12 @@ def check_structure(model: Model, lines: LineList, design: Design) -> None:
     CannotDetermine
         With every such finding in the message, and the terms concerned.
     """
+    bands = _bands(design.groups)
     findings = [
-        *_breakdown_without_isotopes(model, lines, design),
-        *_vibration_beyond_levels(model, lines, design),
-        *_rotation_beyond_levels(model, lines, design),
-        *_all_scales_free(model, lines, design),
+        *_breakdown_without_isotopes(model, [lines.isotopologues[code] for code in bands]),
+        *_vibration_beyond_levels(model, bands.values()),
+        *_rotation_beyond_levels(model, bands),
+        *_all_scales_free(model, {lines.sources[code].name for code in set(design.groups.source.tolist())}),
     ]
     findings = findings or _too_few_lines(model, design)
     if findings:
@@ -71,12 +72,11 @@ def check_rank(model: Model, r: np.ndarray) -> Rank:
     raise CannotDetermine(text, terms=lost)
 
 
-def floating_bands(lines: LineList, design: Design) -> list[str]:
+def floating_bands(groups: Groups) -> list[str]:
     """Names of the bands that share no vibrational level with the largest connected set of bands."""
-    groups = design.groups
     bands = defaultdict(int)
-    for upper, lower, count in zip(groups.v_upper, groups.v_lower, groups.lines, strict=True):
-        bands[int(upper), int(lower)] += int(count)
+    for *band, count in zip(groups.v_upper.tolist(), groups.v_lower.tolist(), groups.lines.tolist(), strict=True):
+        bands[tuple(band)] += count
     sets = _connected(bands)
     main = max(sets, key=lambda levels: sum(n for (upper, _), n in bands.items() if upper in levels))
     return [f"{upper}-{lower}" for upper, lower in sorted(bands) if upper not in main]
@@ -88,49 +88,49 @@ def listed(names) -> str:
     return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
 
 
-def _free_constants(model: Model, l: int):
-    return [item for item in model.constants if item.l == l and (model.prior(item) is None) and not item.atom]
+def _bands(groups: Groups) -> dict[int, set[tuple[int, int]]]:
+    """Bands (v', v'') of each isotopologue code."""
+    bands = defaultdict(set)
+    columns = (groups.isotopologue, groups.v_upper, groups.v_lower)
+    for code, upper, lower in zip(*(column.tolist() for column in columns), strict=True):
+        bands[code].add((upper, lower))
+    return bands
 
 
-def _breakdown_without_isotopes(model: Model, lines: LineList, design: Design):
-    present = [
-        model.isotopologue(lines.isotopologues[code]) for code in np.unique(design.groups.isotopologue)
+def _free_terms(model: Model, l: int):
+    return [
+        item for item in model.constants if item.l == l and item.kind == "term" and model.prior(item) is None
     ]
+
+
+def _breakdown_without_isotopes(model: Model, names):
+    """Breakdown terms of an atom of which the isotopologues `names` and the reference have one isotope."""
     for atom in dict.fromkeys(item.atom for item in model.constants if item.atom):
-        names = [item.name for item in model.constants if item.atom == atom and model.prior(item) is None]
+        concerned = [item.name for item in model.constants if item.atom == atom and model.prior(item) is None]
         isotopes = {
             nuclide
-            for molecule in (model.reference, *present)
+            for molecule in (model.reference, *map(model.isotopologue, names))
             for nuclide, element in zip(molecule.nuclides, molecule.elements, strict=True)
             if element == atom
         }
-        if names and len(isotopes) < 2:
+        if concerned and len(isotopes) < 2:
             yield (
-                names,
-                f"{listed(names)}: every line has the same isotope {isotopes.pop()} of {atom}, and a breakdown "
+                concerned,
+                f"{listed(concerned)}: every line has the same isotope {isotopes.pop()} of {atom}, and a breakdown "
                 "term shows only in the difference between isotopes; add lines of an isotopologue with another "
                 f"isotope of {atom}, or remove the breakdown terms of {atom}.",
             )
 
 
-def _vibration_beyond_levels(model: Model, lines: LineList, design: Design):
+def _vibration_beyond_levels(model: Model, bands):
     """k at l = 0 against the independent differences of vibrational levels."""
-    terms = _free_constants(model, 0)
-    differences, reached, floating = 0, set(), []
-    for code in np.unique(design.groups.isotopologue):
-        of_code = design.groups.isotopologue == code
-        bands = {
-            (int(upper), int(lower))
-            for upper, lower in zip(
-                design.groups.v_upper[of_code], design.groups.v_lower[of_code], strict=True
-            )
-        }
-        sets = _connected(bands)
-        differences += sum(len(levels) - 1 for levels in sets)
-        reached |= set().union(*sets)
-        floating += sets[1:]
+    terms = _free_terms(model, 0)
+    connected = [_connected(of_isotopologue) for of_isotopologue in bands]
+    differences = sum(len(levels) - 1 for sets in connected for levels in sets)
     if len(terms) <= differences:
         return
+    reached = {level for sets in connected for levels in sets for level in levels}
+    floating = [levels for sets in connected for levels in sets[1:]]
     lost = [item.name for item in terms[differences:]]
     largest = f"at most {terms[differences - 1].name}" if differences else "no term with l = 0"
     levels = "level" if len(reached) == 1 else "levels"
@@ -145,14 +145,12 @@ def _vibration_beyond_levels(model: Model, lines: LineList, design: Design):
     )
 
 
-def _rotation_beyond_levels(model: Model, lines: LineList, design: Design):
+def _rotation_beyond_levels(model: Model, bands):
     """k at each l of 1 and more against the vibrational levels whose rotation is seen."""
-    groups = design.groups
-    levels = set(zip(groups.isotopologue, groups.v_upper, strict=True))
-    levels |= set(zip(groups.isotopologue, groups.v_lower, strict=True))
-    reached = {int(v) for _, v in levels}
+    levels = {(code, v) for code, of_isotopologue in bands.items() for band in of_isotopologue for v in band}
+    reached = {v for _, v in levels}
     for l in sorted({item.l for item in model.constants if item.l}):
-        terms = _free_constants(model, l)
+        terms = _free_terms(model, l)
         if len(terms) > len(levels):
             lost = [item.name for item in terms[len(levels) :]]
             yield (
@@ -163,8 +161,7 @@ def _rotation_beyond_levels(model: Model, lines: LineList, design: Design):
             )
 
 
-def _all_scales_free(model: Model, lines: LineList, design: Design):
-    used = {lines.sources[code].name for code in design.groups.source}
+def _all_scales_free(model: Model, used: set[str]):
     free = [item for item in model.parameters if item.kind == "scale" and model.prior(item) is None]
     if used and used <= {item.source for item in free}:
         names = [item.name for item in free]
@@ -189,9 +186,13 @@ def _connected(bands) -> list[set[int]]:
     """Sets of vibrational levels joined by bands, the largest first."""
     sets: list[set[int]] = []
     for band in bands:
-        touching = [levels for levels in sets if levels & set(band)]
-        sets = [levels for levels in sets if levels not in touching]
-        sets.append(set(band).union(*touching))
+        joined, apart = set(band), []
+        for levels in sets:
+            if levels.isdisjoint(band):
+                apart.append(levels)
+            else:
+                joined |= levels
+        sets = [*apart, joined]
     return sorted(sets, key=lambda levels: (-len(levels), min(levels)))
 
 

@@ -5,6 +5,7 @@ Parameters stand in the order terms (by l, then k), breakdown terms, calibration
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from decimal import Decimal, localcontext
 from functools import cached_property
@@ -125,11 +126,19 @@ class Model:
 
     def prior(self, parameter: Parameter) -> Prior | None:
         """The prior of a parameter, None where it is free."""
-        if parameter.source:
-            source = next(item for item in self.calibration if item.name == parameter.source)
-            sigma = getattr(source, parameter.kind)
-            return Prior(0.0, sigma) if np.isfinite(sigma) else None
-        return self.priors.get(parameter.name)
+        return self._all_priors.get(parameter.name)
+
+    @cached_property
+    def _all_priors(self) -> Mapping[str, Prior]:
+        """Priors of all parameters that are not free, those of calibration terms included."""
+        calibration = {
+            f"{kind}[{source.name}]": Prior(0.0, sigma)
+            for source in self.calibration
+            for kind, sigma in (("offset", source.offset), ("scale", source.scale))
+            if sigma is not None
+        }
+        given = {**self.priors, **calibration}
+        return {name: prior for name, prior in given.items() if np.isfinite(prior.sigma)}
 
     @cached_property
     def fixed(self) -> np.ndarray:

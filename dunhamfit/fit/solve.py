@@ -58,7 +58,7 @@ def make_model(
         AME2020 if not given.
     """
     masses = masses or Masses.ame2020()
-    used = np.unique(lines.source[lines.used])
+    used = np.flatnonzero(np.bincount(lines.source[lines.used]))
     calibrated = [lines.sources[code] for code in used]
     return Model(
         reference=Isotopologue.parse(reference, masses),
@@ -222,7 +222,7 @@ def _statistics(rows: Rows, rank: Rank, outcome: _Outcome) -> Statistics:
 
 def _warnings(lines: LineList, design: Design, noise: Noise, rank: Rank) -> tuple[str, ...]:
     texts = []
-    floating = floating_bands(lines, design)
+    floating = floating_bands(design.groups)
     if floating:
         texts.append(
             f"bands {listed(floating)} share no vibrational level with the rest: only the form of the model, "

@@ -184,7 +184,7 @@ def _statistics(triangles: tuple[Triangle, ...], noise: Noise, rank: Rank, param
 
 
 def _warnings(lines: LineList, design: Design, noise: Noise) -> tuple[str, ...]:
-    floating = floating_bands(lines, design)
+    floating = floating_bands(design.groups)
     if not floating:
         return noise_remarks(noise)
     return (
