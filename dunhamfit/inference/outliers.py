@@ -28,8 +28,9 @@ from dunhamfit.fit.solve import fit_model
 from dunhamfit.inference.studentised import Studentised, noise_of_lines, studentise
 from dunhamfit.lines.line_list import LineList
 
-# What the plain fit must show before more is done: probability times number of lines; pull on a prior in sigma.
-_SUSPICIOUS, _PULLED_PRIOR = 0.2, 5.0
+# What the plain fit must show before more is done: a probability so many times above that of a large line; or a pull
+# on a prior, in sigma.
+_SUSPICIOUS, _PULLED_PRIOR = 5.0, 5.0
 # A noise factor of this size may come from a line that pulls all others.
 _INCREDIBLE = 5.0
 # Median of |u| for normal u; what part of it, over how many lines, means that a few large ones make the factor.
@@ -118,7 +119,7 @@ def _suspicious(fit: Fit, judged: Studentised, level: float) -> bool:
     used = fit.lines.used
     if fit.robust != "none":
         return bool(np.any(np.abs(judged.residual[used]) > _CANDIDATES * limit(fit, level) * judged.sigma[used]))
-    if np.nanmin(judged.p[used], initial=1.0) * used.sum() < _SUSPICIOUS or _swollen(fit, judged):
+    if np.nanmin(judged.p[used], initial=1.0) * used.sum() < _SUSPICIOUS * level or _swollen(fit, judged):
         return True
     for value, item in zip(fit.values, fit.model.parameters, strict=True):
         prior = fit.model.prior(item)
