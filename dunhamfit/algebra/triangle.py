@@ -17,11 +17,11 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
-from scipy.linalg.lapack import dgeqrf, dtrtri, dtrtrs
+from scipy.linalg.lapack import dgeqrt, dtrtri, dtrtrs
 
-# Entries of a block that is reduced at once. It stays in the nearest cache, and below the size from
-# which OpenBLAS starts threads that cost more than they save.
-_BLOCK = 9000
+# Entries of a block that is reduced at once, and columns of a panel within it. So small, blocks stay in the
+# cache, and no step is large enough for OpenBLAS to start threads, which cost more here than they save.
+_BLOCK, _PANEL = 20_000, 8
 
 
 @dataclass(frozen=True, eq=False)
@@ -121,7 +121,8 @@ def reduce_blocks(blocks, base, *, n: int, rss: float = 0.0, log_sigma: float = 
         stacked[:kept] = above
         stacked[kept:, :columns] = rows
         stacked[kept:, columns] = residual
-        above = np.triu(dgeqrf(stacked, overwrite_a=True)[0][: columns + 1])
+        panel = min(_PANEL, *stacked.shape)
+        above = np.triu(dgeqrt(panel, stacked, overwrite_a=True)[0][: columns + 1])
     height = min(len(above), columns)
     if len(above) > columns:
         rss += float(above[columns, columns]) ** 2
