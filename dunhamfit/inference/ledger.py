@@ -120,10 +120,11 @@ class Ledger:
     @property
     def rule(self) -> str:
         """The rule in words."""
+        lines = self.tested + self.untested
         return (
             "A line is listed if its studentised residual against a fit of the lines not listed has a probability "
-            f"below {self.level:g}/{self.tested + self.untested} (beyond {self.limit:.2f} sigma for a known uncertainty), so that "
-            f"lines without an error give any entry in {self.level:.0%} of cases. Nothing was excluded."
+            f"below {self.level:g}/{lines} (beyond {self.limit:.2f} sigma for a known uncertainty), so that lines "
+            f"without an error give any entry in {self.level:.0%} of cases. Nothing was excluded."
         )
 
 
