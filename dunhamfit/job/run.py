@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -11,12 +12,16 @@ from dunhamfit.errors import InputFaults, UsageError
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.record import Fit
 from dunhamfit.fit.solve import fit_model, make_model
+from dunhamfit.inference.selection import Selection, select_terms
+from dunhamfit.inference.widest import GENEROUS
 from dunhamfit.job.tables import Exclusion, Job
 from dunhamfit.lines.faults import Fault, raise_faults
 from dunhamfit.lines.line_list import LineList, merge
 from dunhamfit.lines.reading import Reading, read_source
 from dunhamfit.lines.request import SourceRequest
 from dunhamfit.molecule.isotopologue import Isotopologue, check_same_molecule
+from dunhamfit.molecule.terms import Term, parse_indices
+from dunhamfit.show.selection_report import recommendation_words
 
 
 @dataclass(frozen=True, eq=False)
@@ -88,7 +93,52 @@ def job_model(job: Job, lines: LineList) -> Model:
 def fit_job(job: Job, lines: LineList | None = None) -> Fit:
     """Read the lines of a job, unless they are given, and fit its model to them."""
     lines = job_lines(job) if lines is None else lines
+    if job.terms is None:
+        job, remark = _with_selected_terms(job, lines)
+        fit = fit_job(job, lines)
+        return replace(fit, warnings=(remark, *fit.warnings))
     return fit_model(job_model(job, lines), lines, policy=job.policy, robust=job.robust)
+
+
+def select_job(
+    job: Job,
+    lines: LineList,
+    *,
+    widest: Sequence[int] = GENEROUS,
+    progress: Callable[[int, int], None] | None = None,
+) -> Selection:
+    """Compare the sets of terms that the lines of a job can determine, whatever terms it asks for."""
+    if job.relations or job.potential:
+        raise UsageError(
+            "sets of terms are compared by linear fits; give [model] terms as a list where there are relations or a "
+            "potential"
+        )
+    return select_terms(
+        lines,
+        reference=job.reference,
+        breakdown=job.breakdown,
+        priors=job.priors,
+        policy=job.policy,
+        masses=job.masses,
+        widest=widest,
+        progress=progress,
+    )
+
+
+def _with_selected_terms(job: Job, lines: LineList) -> tuple[Job, str]:
+    """The job with the recommended terms, and what was chosen and why; breakdown terms stay with their terms."""
+    selection = select_job(job, lines)
+    terms = selection.recommended.terms
+    breakdown, left = {}, []
+    for atom, names in job.breakdown.items():
+        kept = [name for name in names if Term(*parse_indices(name)) in terms]
+        left += [f"d{name}_{atom}" for name in names if name not in kept]
+        breakdown[atom] = tuple(kept)
+    priors = {name: prior for name, prior in job.priors.items() if name not in left}
+    remark = recommendation_words(selection)
+    if left:
+        remark += f". Left out with their terms: {', '.join(left)}"
+    return replace(job, terms=terms, breakdown=breakdown, priors=priors), remark
 
 
 def exclude_rows(lines: LineList, exclusions: tuple[Exclusion, ...]) -> LineList:

@@ -1,0 +1,191 @@
+"""One set of terms judged from the triangles of a wide fit, at p x p work each.
+
+A smaller set is the wide problem with the columns of the left-out terms fixed at zero, so that
+chi2, error bars and the prediction of a band that was left out cost no pass over the lines.
+
+With S_g = R_g R^-1 the rows of band g in the orthonormal coordinates of the wide fit, Q the basis of
+the candidate's columns in them and e_g the residuals of the band at the candidate's solution, the
+other bands predict band g with the residuals (I - H_g)^-1 e_g and the covariance (I - H_g)^-1, where
+H_g = S_g Q Q^T S_g^T (the identity behind the PRESS statistic: D. M. Allen, Technometrics 16, 125
+(1974)). Their log predictive density, -1/2 [e_g^T (I - H_g)^-1 e_g - ln det(I - H_g)] and a part that is
+the same for all candidates, is what left-out data say of a model
+(A. Vehtari, A. Gelman and J. Gabry, Stat. Comput. 27, 1413 (2017)).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg import qr, solve_triangular
+
+from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
+from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge
+from dunhamfit.fit.record import Fit
+from dunhamfit.inference.resample import band_labels
+from dunhamfit.molecule.terms import Term, TermSet
+
+# Smallest pivot of I - H_g below which the rest of the bands cannot predict band g.
+_ALONE = 1e-9
+
+
+@dataclass(frozen=True, eq=False)
+class Candidate:
+    """One set of terms and how it does.
+
+    Attributes
+    ----------
+    terms : TermSet
+    columns : ndarray of int
+        Places of its free parameters in the wide fit.
+    values, sigmas : ndarray of float, shape (columns,)
+    chi2, reduced_chi2, aicc, bic : float
+        With the noise factors of the wide fit.
+    left_out : ndarray of float, shape (bands,)
+        Sum of squares of the whitened errors of predicting each band from all others; infinite where a
+        band is needed to determine the set.
+    log_predictive : ndarray of float, shape (bands,)
+        Log predictive density of each left-out band, up to a part that all candidates share.
+    left_out_error : float
+        Root mean square of the whitened errors over the bands that can be predicted.
+    smallest_t : float
+        Smallest |value| / sigma of the terms that end a column of the staircase.
+    condition : float
+        Of the design with columns of unit norm.
+    """
+
+    terms: TermSet
+    columns: np.ndarray
+    values: np.ndarray
+    sigmas: np.ndarray
+    chi2: float
+    reduced_chi2: float
+    aicc: float
+    bic: float
+    left_out: np.ndarray
+    log_predictive: np.ndarray
+    left_out_error: float
+    smallest_t: float
+    condition: float
+
+    @property
+    def parameters(self) -> int:
+        return len(self.columns)
+
+
+class Board:
+    """The wide fit in orthonormal coordinates, and the candidates judged so far."""
+
+    def __init__(self, wide: Fit):
+        self.wide = wide
+        count = len(wide.groups)
+        scaled = [t.scaled(f) for t, f in zip(wide.triangles[:count], wide.noise.by_group, strict=True)]
+        whole = merge([*scaled, *wide.triangles[count:]])
+        self.free = np.flatnonzero(~wide.model.fixed)
+        self.r, self.z, self.rss, self.n = whole.r[:, self.free], whole.z, whole.rss, whole.n
+        self.base, self.log_sigma = wide.values[self.free], whole.log_sigma
+        parameters = [wide.model.parameters[i] for i in self.free]
+        self._kind = [item.kind for item in parameters]
+        self._term = [None if item.source else Term(item.k, item.l) for item in parameters]
+        labels, self.bands = band_labels(wide)
+        groups = [merge([t for t, of in zip(scaled, labels, strict=True) if of == b]) for b in range(len(self.bands))]
+        self._stack = _Bands(groups, self.r, self.free)
+        self.seen: dict[TermSet, Candidate] = {}
+
+    def judge(self, terms: TermSet) -> Candidate:
+        """The candidate with these terms, a subset of those of the wide fit."""
+        if terms not in self.seen:
+            self.seen[terms] = self._judge(terms)
+        return self.seen[terms]
+
+    def _judge(self, terms: TermSet) -> Candidate:
+        inside = set(terms)
+        kept = np.array([term is None or term in inside for term in self._term])
+        # Left-out columns are fixed at zero: residuals about the wide solution, then those of the candidate.
+        target = self.z + self.r[:, ~kept] @ self.base[~kept]
+        basis, r = np.linalg.qr(self.r[:, kept])
+        inward = basis.T @ target
+        rest = target - basis @ inward
+        inverse = covariance_factor(r)
+        values = self.base[kept] + inverse @ inward
+        sigmas = np.sqrt(np.einsum("ij,ij->i", inverse, inverse))
+        chi2 = self.rss + float(rest @ rest)
+        left_out, predictive = self._stack.left_out(basis, self.z - rest)
+        told = np.isfinite(left_out)
+        lines = int(self._stack.lines[told].sum())
+        singular = np.linalg.svd(r / np.sqrt(np.einsum("ij,ij->j", r, r)), compute_uv=False)
+        counted = len(values) + len(self.wide.noise.factors)
+        likelihood = log_likelihood(chi2, self.n, self.log_sigma)
+        return Candidate(
+            terms=terms,
+            columns=self.free[kept],
+            values=values,
+            sigmas=sigmas,
+            chi2=chi2,
+            reduced_chi2=reduced_chi2(chi2, self.n - len(values)),
+            aicc=aicc(likelihood, self.n, counted),
+            bic=bic(likelihood, self.n, counted),
+            left_out=left_out,
+            log_predictive=predictive,
+            left_out_error=float(np.sqrt(left_out[told].sum() / lines)) if lines else np.inf,
+            smallest_t=self._smallest_t(inside, kept, np.abs(values) / sigmas),
+            condition=float(singular[0] / singular[-1]),
+        )
+
+    def _smallest_t(self, inside: set[Term], kept: np.ndarray, t: np.ndarray) -> float:
+        places = np.flatnonzero(kept)
+        tops = [
+            size
+            for place, size in zip(places, t, strict=True)
+            if self._kind[place] == "term" and Term(self._term[place].k + 1, self._term[place].l) not in inside
+        ]
+        return float(min(tops, default=np.inf))
+
+
+class _Bands:
+    """Bands in the orthonormal coordinates of the wide fit, each reduced to its own rank."""
+
+    def __init__(self, triangles: list[Triangle], r: np.ndarray, free: np.ndarray):
+        width = r.shape[1]
+        shares, residuals, outside = [], [], []
+        for item in triangles:
+            share = solve_triangular(r[:width], item.r[:, free].T, trans=1, check_finite=False).T
+            rotation, reduced, pivots = qr(share, mode="full", pivoting=True, check_finite=False)
+            rank = max(int(np.sum(np.abs(np.diag(reduced)) > 1e-11)), 1)
+            rotated = rotation.T @ item.z
+            compact = np.zeros((rank, width))
+            compact[:, pivots] = reduced[:rank]
+            shares.append(compact)
+            residuals.append(rotated[:rank])
+            outside.append(item.rss + float(rotated[rank:] @ rotated[rank:]))
+        tallest = max(len(item) for item in shares)
+        self.shares = np.zeros((len(shares), tallest, width))
+        self.z = np.zeros((len(shares), tallest))
+        for index, (share, residual) in enumerate(zip(shares, residuals, strict=True)):
+            self.shares[index, : len(share)] = share
+            self.z[index, : len(residual)] = residual
+        self.lines = np.array([item.n for item in triangles])
+        self.outside = np.array(outside)
+        # A trace of the identity keeps the factor of a singular matrix real; it moves no pivot that counts.
+        self._identity = np.eye(tallest) * (1 + 0.1 * _ALONE)
+
+    def left_out(self, basis: np.ndarray, step: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Squared whitened errors, and log predictive density, of each band predicted by the others; shape (bands,).
+
+        Parameters
+        ----------
+        basis : ndarray of float, shape (p wide, p)
+            Orthonormal basis of the candidate's columns.
+        step : ndarray of float, shape (p wide,)
+            R (c - base) of the candidate, in the coordinates of R.
+        """
+        residual = self.shares @ step - self.z
+        own = self.shares @ basis
+        lower = np.linalg.cholesky(self._identity - own @ own.transpose(0, 2, 1))
+        pivots = np.einsum("gii->gi", lower)
+        alone = pivots.min(axis=1) ** 2 < _ALONE
+        half = np.linalg.solve(lower, residual[:, :, None])
+        predicted = np.linalg.solve(lower.transpose(0, 2, 1), half)
+        errors = (predicted[:, :, 0] ** 2).sum(axis=1) + self.outside
+        density = np.log(pivots).sum(axis=1) - 0.5 * ((half[:, :, 0] ** 2).sum(axis=1) + self.outside)
+        return np.where(alone, np.inf, errors), np.where(alone, -np.inf, density)
