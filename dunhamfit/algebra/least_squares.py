@@ -19,7 +19,7 @@ import numpy as np
 from scipy.linalg import cholesky
 from scipy.linalg.lapack import dtrtrs
 
-from dunhamfit.algebra.extended import Extended
+from dunhamfit.algebra.extended import Extended, two_sum
 from dunhamfit.algebra.rows import Rows
 from dunhamfit.algebra.triangle import covariance_factor
 from dunhamfit.errors import NotConverged
@@ -71,7 +71,8 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
     values = np.array(start, dtype=float)
     small = _STEP_IN_SIGMA * np.sqrt((covariance_factor(r) ** 2).sum(axis=1))
     for _ in range(_ROUNDS):
-        half = dtrtrs(r, rows.gradient(rows.residuals(values)), trans=1)[0]
+        residual = rows.residuals(values)
+        half = dtrtrs(r, rows.gradient(residual), trans=1)[0]
         step = dtrtrs(r, half)[0]
         values = values + step
         if np.all(np.abs(step) <= np.maximum(small, _LAST_PLACES * np.spacing(np.abs(values)))):
@@ -81,7 +82,8 @@ def refine(rows: Rows, r: np.ndarray, start: np.ndarray) -> Solution:
             "the refinement of the least-squares solution did not settle; the model is close to undetermined",
             state={"step_in_sigma": float(np.sqrt(half @ half)), "values": values},
         )
-    residual = rows.residuals(values)
+    moved = two_sum(residual.high, -rows.matrix.rough_product(step))
+    residual = Extended(moved.high, moved.low + residual.low)
     whitened = residual.high * rows.scale
     return Solution(values, r, residual, float(whitened @ whitened) + float(rows.spread.sum()))
 

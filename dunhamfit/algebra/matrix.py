@@ -104,6 +104,12 @@ class Matrix:
         line = subtract(level.take(self.plus), level.take(self.minus))
         return add(line, self.own.transposed_product(values[shared:])) if len(self.own.exponent) else line
 
+    def rough_product(self, values: np.ndarray) -> np.ndarray:
+        """matrix^T values in plain float64, for steps too small to need more, shape (n,)."""
+        shared = len(self.table.exponent)
+        level = values[:shared] @ self.table.joined.high
+        return level[self.plus] - level[self.minus] + values[shared:] @ self.own.joined.high
+
     def product(self, weights: Extended) -> np.ndarray:
         """matrix @ weights, summed well beyond double precision before the last rounding, shape (p,).
 
@@ -114,7 +120,7 @@ class Matrix:
         pieces, exponent = cut(weights, self.table.bits)
         levels = self.table.shape[1]
         # Sums of pieces over the lines of one level are exact: multiples of one unit, with room to add.
-        by_level = np.stack(
+        by_level = np.array(
             [np.bincount(self.plus, each, levels) - np.bincount(self.minus, each, levels) for each in pieces]
         )
         return np.ldexp(np.concatenate([self.table.product(by_level), self.own.product(pieces)]), exponent)

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.linalg import svd
-from scipy.linalg.lapack import dgeqrf
+from scipy.linalg.lapack import dgeqrf, dgesdd
 
 # Rounding leaves a singular matrix with a smallest singular value of some 1e-16 of the largest.
 # Below 1e-13 the sigma of the worst direction would itself be known to three digits or fewer.
@@ -46,7 +46,7 @@ def judge(r: np.ndarray, order=None) -> Rank:
     empty = norms == 0
     scaled = r / np.where(empty, 1.0, norms)
     singular = np.zeros(width)
-    singular[: min(r.shape)] = svd(scaled, compute_uv=False, check_finite=False)
+    singular[: min(r.shape)] = dgesdd(scaled, compute_uv=False)[1]
     lost = int(np.sum(singular <= SINGULAR_BELOW * singular[0]))
     if not lost:
         return Rank(float(singular[0] / singular[-1]), (), np.empty((0, width)))

@@ -150,8 +150,7 @@ def plain_rows(matrix, observed, sigma=None) -> Rows:
 
 
 def _weighted(residual: Extended, scale: np.ndarray) -> Extended:
-    """residual * scale^2, keeping the low part, shape (n,)."""
-    once = two_product(residual.high, scale)
-    once_low = once.low + residual.low * scale
-    twice = two_product(once.high, scale)
-    return Extended(twice.high, twice.low + once_low * scale)
+    """residual * weight, keeping the low part, shape (n,); the weight is the square of the scale, rounded."""
+    weight = scale * scale
+    high, error = two_product(residual.high, weight)
+    return Extended(high, error + residual.low * weight)

@@ -117,7 +117,7 @@ def cut(weights: Extended, bits: int) -> tuple[np.ndarray, int]:
     """
     exponent = int(np.frexp(np.abs(weights.high).max(initial=0.0))[1])
     shrink = 2.0**-exponent
-    return np.stack(_cut(weights.high * shrink, weights.low * shrink, bits)), exponent
+    return np.array(_cut(weights.high * shrink, weights.low * shrink, bits)), exponent
 
 
 def _cut(high: np.ndarray, low: np.ndarray, bits: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

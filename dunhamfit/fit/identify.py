@@ -13,7 +13,7 @@ import numpy as np
 from dunhamfit.algebra.rank import Rank, judge
 from dunhamfit.errors import CannotDetermine
 from dunhamfit.fit.design import Design, Groups
-from dunhamfit.fit.model import Model
+from dunhamfit.fit.model import Model, Parameter
 from dunhamfit.lines.line_list import LineList
 
 
@@ -25,11 +25,11 @@ def check_structure(model: Model, lines: LineList, design: Design) -> None:
     CannotDetermine
         With every such finding in the message, and the terms concerned.
     """
-    bands = _bands(design.groups)
+    bands, terms = _bands(design.groups), _free_terms(model)
     findings = [
         *_breakdown_without_isotopes(model, [lines.isotopologues[code] for code in bands]),
-        *_vibration_beyond_levels(model, bands.values()),
-        *_rotation_beyond_levels(model, bands),
+        *_vibration_beyond_levels(terms[0], bands.values()),
+        *_rotation_beyond_levels(terms, bands),
         *_all_scales_free(model, {lines.sources[code].name for code in set(design.groups.source.tolist())}),
     ]
     findings = findings or _too_few_lines(model, design)
@@ -97,10 +97,13 @@ def _bands(groups: Groups) -> dict[int, set[tuple[int, int]]]:
     return bands
 
 
-def _free_terms(model: Model, l: int):
-    return [
-        item for item in model.constants if item.l == l and item.kind == "term" and model.prior(item) is None
-    ]
+def _free_terms(model: Model) -> dict[int, list[Parameter]]:
+    """Terms without a prior for each l, in the order of k."""
+    terms = defaultdict(list)
+    for item in model.constants:
+        if item.kind == "term" and model.prior(item) is None:
+            terms[item.l].append(item)
+    return terms
 
 
 def _breakdown_without_isotopes(model: Model, names):
@@ -122,9 +125,8 @@ def _breakdown_without_isotopes(model: Model, names):
             )
 
 
-def _vibration_beyond_levels(model: Model, bands):
+def _vibration_beyond_levels(terms, bands):
     """k at l = 0 against the independent differences of vibrational levels."""
-    terms = _free_terms(model, 0)
     connected = [_connected(of_isotopologue) for of_isotopologue in bands]
     differences = sum(len(levels) - 1 for sets in connected for levels in sets)
     if len(terms) <= differences:
@@ -145,13 +147,12 @@ def _vibration_beyond_levels(model: Model, bands):
     )
 
 
-def _rotation_beyond_levels(model: Model, bands):
+def _rotation_beyond_levels(free_terms, bands):
     """k at each l of 1 and more against the vibrational levels whose rotation is seen."""
     levels = {(code, v) for code, of_isotopologue in bands.items() for band in of_isotopologue for v in band}
     reached = {v for _, v in levels}
-    for l in sorted({item.l for item in model.constants if item.l}):
-        terms = _free_terms(model, l)
-        if len(terms) > len(levels):
+    for l, terms in sorted(free_terms.items()):
+        if l and len(terms) > len(levels):
             lost = [item.name for item in terms[len(levels) :]]
             yield (
                 lost,

@@ -179,10 +179,9 @@ def _mass_factors(
     rho = mass_ratio(reference, other)
     factors = np.empty((len(constants), 2))
     with localcontext(prec=DIGITS):
-        powers = {}
+        powers = {power: rho**power for power in {constant.k + 2 * constant.l for constant in constants}}
         for index, constant in enumerate(constants):
-            power = constant.k + 2 * constant.l
-            factor = powers.setdefault(power, rho**power)
+            factor = powers[constant.k + 2 * constant.l]
             if constant.atom:
                 factor = factor * breakdown_factor(reference, other, constant.atom)
             high = float(factor)
