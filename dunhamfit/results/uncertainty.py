@@ -130,7 +130,8 @@ def parts_of(fit: Fit, own: OwnConstants, upper: Levels, lower: Levels, selectio
             raise UsageError(f"the sets of terms were compared for {wide.reference.name}, not for this molecule")
         wide_rows = np.zeros((len(upper.v), len(wide.parameters)))
         wide_rows[:, : len(wide.constants)] = _columns(wide, name, upper, lower).high.T
-        spread = selection.model_spread(wide_rows)
+        departure = differences(fit, name, upper, lower) - differences(selection.wide, name, upper, lower)
+        spread = selection.model_spread(wide_rows, departure)
     of_masses = rows @ own.mass_factor
     return Parts(
         fit=np.sqrt(of_fit),

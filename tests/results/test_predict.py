@@ -133,7 +133,7 @@ def test_the_model_part_is_the_spread_over_near_equal_sets():
     spread = predict(fit, v_upper=6, v_lower=0, j_max=60, selection=selection)
     assert np.array_equal(plain.parts.fit, spread.parts.fit)
     assert spread.sigma == pytest.approx(np.hypot(plain.sigma, spread.parts.model))
-    # Written out: the weighted standard deviation of what each near-equal set predicts.
+    # Written out: the weighted root mean square of how far each near-equal set is from the quoted position.
     predicted = []
     for candidate in selection.near_equal:
         values = np.zeros(len(selection.wide.values))
@@ -143,8 +143,7 @@ def test_the_model_part_is_the_spread_over_near_equal_sets():
         predicted.append(
             predict(type(wide)(model=model, values=values, **fields), v_upper=6, v_lower=0, j_max=60).position
         )
-    mean = selection.weights @ predicted
-    expected = np.sqrt(selection.weights @ (np.array(predicted) - mean) ** 2)
+    expected = np.sqrt(selection.weights @ (np.array(predicted) - plain.position) ** 2)
     assert spread.parts.model == pytest.approx(expected, rel=1e-5, abs=1e-12)
     assert spread.records()[0]["sigma_model"] is not None
 
