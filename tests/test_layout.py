@@ -29,8 +29,8 @@ ROWS = (
     ("errors",),
 )
 RANK = {place: len(ROWS) - row for row, places in enumerate(ROWS) for place in places}
-# These two are tables of what is loaded on demand, by name.
-LAZY = {PACKAGE / "__init__.py", PACKAGE / "cli" / "main.py"}
+# What loads on demand, by name: two tables, and the route to fits that need lmfit.
+LAZY = {PACKAGE / "__init__.py", PACKAGE / "cli" / "main.py", PACKAGE / "inference" / "routes.py"}
 
 LONGEST_FILE = 400
 

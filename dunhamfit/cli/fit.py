@@ -10,6 +10,7 @@ from dunhamfit.archive.store import open_archive
 from dunhamfit.cli.output import Output, json_option, quiet_option
 from dunhamfit.fit.record import Fit
 from dunhamfit.inference.ledger import make_ledger
+from dunhamfit.job.again import origin_of
 from dunhamfit.job.run import fit_job, read_job_lines
 from dunhamfit.job.tables import Job, read_job
 from dunhamfit.lines.faults import raise_faults
@@ -44,7 +45,10 @@ def run_fit(job: Job, archive: Path | None, output: Output) -> Fit:
     path = archive or job.archive
     with open_archive(path, mode="a") as store:
         parent = store.latest_number()
-        run = store.save(fit, job_text=job.text, title=job.title, parent=parent, notices=reading.notices)
+        origin = origin_of(job)
+        run = store.save(
+            fit, job_text=job.text, title=job.title, parent=parent, origin=origin, notices=reading.notices
+        )
     for text in fit.warnings:
         output.warn(text)
     ledger = make_ledger(fit, refit=lambda lines: fit_job(job, lines))

@@ -9,7 +9,6 @@ Jacobian J of the map c(theta): C = J (J^T R^T R J)^-1 J^T, from triangular solv
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import replace
 from types import MappingProxyType
 from typing import Protocol
 
@@ -27,7 +26,9 @@ from dunhamfit.fit.identify import listed
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.noise import Noise, as_stated, check_policy, estimate
 from dunhamfit.fit.record import Fit, Statistics
-from dunhamfit.inference.relations import identifier, step_name
+from dunhamfit.inference.origins import given_origins
+from dunhamfit.inference.potential_fit import PotentialMap
+from dunhamfit.inference.relations import Relations, identifier, step_name
 from dunhamfit.lines.line_list import LineList
 
 _ROUNDS = 30
@@ -50,6 +51,11 @@ class ParameterMap(Protocol):
     def jacobian(self, free: np.ndarray) -> np.ndarray: ...
     def parameters(self, start: np.ndarray, scale: np.ndarray, limits: np.ndarray) -> lmfit.Parameters: ...
     def read(self, parameters: lmfit.Parameters) -> np.ndarray: ...
+
+
+def make_constraint(model: Model, relations: Mapping[str, str], potential: int) -> ParameterMap:
+    """The map of a potential to a_N where `potential` is N, else that of the relations."""
+    return PotentialMap(model, potential) if potential else Relations(model, relations)
 
 
 def fit_constrained(
@@ -109,7 +115,6 @@ def fit_constrained(
     if allowance is not None:
         inner = inner @ cholesky(np.eye(len(r)) + r @ allowance @ r.T, lower=True)
     values = constraint.values(free)
-    fixed = {name: _fixed_words(prior) for name, prior in model.priors.items()}
     return Fit(
         model=model,
         lines=lines,
@@ -119,7 +124,7 @@ def fit_constrained(
         groups=design.groups,
         statistics=_statistics(design, triangles, noise, values, r),
         warnings=_bound_warnings(constraint, active, bounds),
-        origins=MappingProxyType({**fixed, **constraint.origins}),
+        origins=MappingProxyType({**given_origins(model), **constraint.origins}),
         design_made=design,
     )
 
@@ -271,19 +276,4 @@ def _bound_warnings(constraint: ParameterMap, active: np.ndarray, bounds) -> tup
         "constants take it as known"
         for name, at_bound in zip(constraint.names, active, strict=True)
         if at_bound
-    )
-
-
-def _fixed_words(prior) -> str:
-    words = "fixed value" if prior.sigma == 0 else f"prior of sigma {prior.sigma:.3g}"
-    return f"{words} from {prior.origin}" if prior.origin else words
-
-
-def with_origins(fit: Fit) -> Fit:
-    """The fit with a note on every constant whose value is fixed or has a prior."""
-    if not fit.model.priors:
-        return fit
-    return replace(
-        fit,
-        origins=MappingProxyType({**{n: _fixed_words(p) for n, p in fit.model.priors.items()}, **fit.origins}),
     )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import importlib
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
@@ -10,9 +11,7 @@ from dunhamfit.errors import UsageError
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.record import Fit
 from dunhamfit.fit.solve import fit_model
-from dunhamfit.inference.constrained import fit_constrained, with_origins
-from dunhamfit.inference.potential_fit import PotentialMap
-from dunhamfit.inference.relations import Relations
+from dunhamfit.inference.origins import with_origins
 from dunhamfit.lines.line_list import LineList
 
 
@@ -52,5 +51,7 @@ def fit_route(model: Model, lines: LineList, route: Route, *, policy: str = "sta
         raise UsageError(f"robust = '{robust}' goes with plain linear fits; leave relations, bounds and potential out")
     if route.potential and route.relations:
         raise UsageError("[model] potential and relations exclude each other: every term follows from the potential")
-    constraint = PotentialMap(model, route.potential) if route.potential else Relations(model, route.relations)
-    return fit_constrained(model, lines, constraint, policy=policy, bounds=route.bounds)
+    # lmfit takes a second or two to load, which a plain fit shall not wait for.
+    constrained = importlib.import_module("dunhamfit.inference.constrained")
+    constraint = constrained.make_constraint(model, route.relations, route.potential)
+    return constrained.fit_constrained(model, lines, constraint, policy=policy, bounds=route.bounds)

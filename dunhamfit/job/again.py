@@ -29,6 +29,8 @@ def origin_of(job: Job) -> dict[str, object]:
     model = {}
     if job.relations:
         model["relations"] = dict(job.relations)
+    if job.bounds:
+        model["bounds"] = {name: list(pair) for name, pair in job.bounds.items()}
     if job.potential:
         model["potential"] = job.potential
     return {"model": model} if model else {}
@@ -54,6 +56,7 @@ def job_of(stored: StoredRun) -> Job:
         priors=fit.model.priors,
         relations=MappingProxyType(dict(further.get("relations", {}))),
         potential=int(further.get("potential", 0)),
+        bounds=MappingProxyType({name: tuple(pair) for name, pair in further.get("bounds", {}).items()}),
         policy=fit.noise.policy,
         robust=fit.robust,
     )
@@ -66,7 +69,7 @@ def repeat_run(stored: StoredRun) -> Fit:
 
 def is_plain(job: Job) -> bool:
     """Whether new lines can be taken in through triangles: a linear fit without weights of its own."""
-    return not (job.relations or job.potential) and job.robust == "none"
+    return not (job.relations or job.bounds or job.potential) and job.robust == "none"
 
 
 def new_sources(job: Job, stored: StoredRun) -> tuple[SourceRequest, ...]:

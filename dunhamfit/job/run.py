@@ -11,7 +11,8 @@ import numpy as np
 from dunhamfit.errors import InputFaults, UsageError
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.record import Fit
-from dunhamfit.fit.solve import fit_model, make_model
+from dunhamfit.fit.solve import make_model
+from dunhamfit.inference.routes import Route, fit_route
 from dunhamfit.inference.selection import Selection, select_terms
 from dunhamfit.inference.widest import GENEROUS
 from dunhamfit.job.tables import Exclusion, Job
@@ -97,7 +98,8 @@ def fit_job(job: Job, lines: LineList | None = None) -> Fit:
         job, remark = _with_selected_terms(job, lines)
         fit = fit_job(job, lines)
         return replace(fit, warnings=(remark, *fit.warnings))
-    return fit_model(job_model(job, lines), lines, policy=job.policy, robust=job.robust)
+    route = Route(relations=job.relations, bounds=job.bounds, potential=job.potential)
+    return fit_route(job_model(job, lines), lines, route, policy=job.policy, robust=job.robust)
 
 
 def select_job(
@@ -108,7 +110,7 @@ def select_job(
     progress: Callable[[int, int], None] | None = None,
 ) -> Selection:
     """Compare the sets of terms that the lines of a job can determine, whatever terms it asks for."""
-    if job.relations or job.potential:
+    if job.relations or job.bounds or job.potential:
         raise UsageError(
             "sets of terms are compared by linear fits; give [model] terms as a list where there are relations or a "
             "potential"

@@ -6,7 +6,7 @@ import difflib
 import math
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from pathlib import Path
 from types import MappingProxyType
 
@@ -41,7 +41,7 @@ _SOURCE = (
     "allow_high_j",
 )
 _EXCLUDE = ("source", "file", "rows", "reason")
-_MODEL = ("terms", "breakdown", "fixed", "relations", "potential")
+_MODEL = ("terms", "breakdown", "fixed", "relations", "bounds", "potential")
 _ERRORS = ("policy", "robust")
 
 
@@ -79,6 +79,7 @@ class Job:
     potential : int
         Highest coefficient a_N of a potential-consistent fit; 0 for none.
     policy, robust : str
+    bounds : mapping from the name of a constant to (lowest, highest), cm-1
     """
 
     path: Path
@@ -96,6 +97,7 @@ class Job:
     potential: int
     policy: str
     robust: str
+    bounds: Mapping[str, tuple[float, float]] = field(default_factory=lambda: MappingProxyType({}))
 
 
 def read_job(path: str | Path) -> Job:
@@ -146,7 +148,7 @@ def _job(tables: Mapping, text: str, path: Path) -> Job:
     masses = _masses(molecule.get("masses", {}))
     Isotopologue.parse(_text(molecule["reference"], "[molecule] reference"), masses)
     sources = _sources(tables.get("source", []), path.parent)
-    priors, relations = _priors(model.get("fixed", {})), dict(model.get("relations", {}))
+    priors, relations = _priors(model.get("fixed", {})), _relations(model.get("relations", {}))
     title = _text(tables.get("title", ""), "title")
     archive = _text(tables.get("archive", f"{path.stem}.h5"), "archive")
     return Job(
@@ -163,6 +165,7 @@ def _job(tables: Mapping, text: str, path: Path) -> Job:
         priors=MappingProxyType(priors),
         relations=MappingProxyType(relations),
         potential=_potential(model.get("potential", 0)),
+        bounds=_bounds(model.get("bounds", {})),
         policy=check_policy(errors.get("policy", "stated")),
         robust=_text(errors.get("robust", "none"), "[errors] robust"),
     )
@@ -294,6 +297,21 @@ def _priors(table: object) -> dict[str, Prior]:
 
 def _is_number(value: object) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
+
+
+def _bounds(table: object) -> Mapping[str, tuple[float, float]]:
+    if not isinstance(table, Mapping):
+        raise UsageError("[model] bounds must be a table, such as bounds = { Y03 = [0, 1e-12] }")
+    for name, pair in table.items():
+        if not isinstance(pair, list) or len(pair) != 2 or not all(_is_number(item) for item in pair):
+            raise UsageError(f"[model] bounds.{name} must be [lowest, highest] (got {pair!r})")
+    return MappingProxyType({name: (float(low), float(high)) for name, (low, high) in table.items()})
+
+
+def _relations(table: object) -> Mapping[str, str]:
+    if not isinstance(table, Mapping) or not all(isinstance(text, str) for text in table.values()):
+        raise UsageError('[model] relations must be a table of texts, such as relations = { Y02 = "-4*Y01**3/Y10**2" }')
+    return dict(table)
 
 
 def _potential(order: object) -> int:
