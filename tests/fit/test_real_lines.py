@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 import pytest
-from exact_fit import distance_in_sigma, exact_fit
 from reference.carbon_monoxide import (
     FUNDAMENTAL_LINES,
     FUNDAMENTAL_SIGMA,
@@ -15,6 +14,7 @@ from reference.carbon_monoxide import (
     ROTATION_D0_SIGMA,
     ROTATION_MHZ,
 )
+from reference.exact_fit import distance_in_sigma, exact_fit
 
 from dunhamfit.errors import CannotDetermine
 from dunhamfit.fit.design import calculate

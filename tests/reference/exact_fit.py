@@ -11,10 +11,11 @@ from fractions import Fraction
 
 import numpy as np
 from mpmath import mp, mpf
-from reference.exact_solution import solved
 
 from dunhamfit.fit.model import Model
 from dunhamfit.lines.line_list import LineList
+
+from .exact_solution import solved
 
 _SHIFT = 2**70  # positions above 1e-3 cm-1 are whole multiples of 2^-70
 

@@ -1,0 +1,1 @@
+"""Measurements of speed, memory, exactness and coverage; see `python -m benchmarks --help`."""
