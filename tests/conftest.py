@@ -2,10 +2,15 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 
-import numpy as np
-import pytest
+# Small matrices gain nothing from threads, and two processes that each start some hinder each other.
+for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(_name, "1")
+
+import numpy as np  # noqa: E402
+import pytest  # noqa: E402
 
 SHARED = Path(__file__).resolve().parents[2] / "shared" / "reference"
 

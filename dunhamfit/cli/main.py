@@ -28,6 +28,8 @@ from dunhamfit.errors import DunhamfitError, DunhamfitWarning, UsageError
 
 UNEXPECTED, WRONG_USE, INTERRUPTED, READER_GONE = 1, UsageError.exit_code, 130, 141
 
+THREAD_VARIABLES = ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS")
+
 # Command -> module and the line shown by --help, in the order of a day's work.
 COMMANDS = {
     "demo": ("dunhamfit.cli.demo", "Write an invented example job into a folder, check it and fit it."),
@@ -116,6 +118,10 @@ def main(argv: Sequence[str] | None = None) -> int:
     argv : sequence of str, optional
         Arguments without the name of the program; those of the process if left out.
     """
+    # Matrices of some dozen columns gain nothing from threads and lose much to them on a busy machine. This
+    # comes before a command loads a numerical library; who knows better sets the variables.
+    for name in THREAD_VARIABLES:
+        os.environ.setdefault(name, "1")
     args = list(sys.argv[1:] if argv is None else argv)
     try:
         return _run_with_messages(args or ["--help"])

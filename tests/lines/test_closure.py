@@ -13,6 +13,8 @@ from dunhamfit.errors import UsageError
 from dunhamfit.lines.closure import check_closure
 from dunhamfit.lines.line_list import Source, merge
 from dunhamfit.lines.network import adjust
+from dunhamfit.lines.reading import read_source
+from dunhamfit.lines.request import SourceRequest
 
 SIGMA = 1e-4
 SIX_BANDS = ("1-0", "2-0", "3-0", "2-1", "3-1", "3-2")
@@ -211,7 +213,7 @@ def test_a_single_band_and_an_empty_list_leave_nothing_to_test():
 
 
 def test_stated_uncertainties_that_do_not_hold_are_reported_as_such(rng):
-    lines = bands(*SIX_BANDS, j_max=40, sigma=SIGMA)
+    lines = bands(*SIX_BANDS, j_max=100, sigma=SIGMA)
     closure = check_closure(moved(lines, rng.normal(0.0, 20 * SIGMA, len(lines))))
     assert closure.overflowing == ("28Si32S",)
     # 20^2 within the scatter of some 240 degrees of freedom.
@@ -226,6 +228,13 @@ def test_lines_without_uncertainty_are_refused():
         check_closure(replace(lines, sigma=sigma))
     with pytest.raises(UsageError, match="'false_alarms' must be between 0 and 1"):
         check_closure(lines, false_alarms=1.0)
+
+
+@pytest.fixture(scope="module")
+def hitran_lines(shared_reference):
+    """The published list of carbon monoxide, six isotopologues, as read."""
+    request = SourceRequest("hitran", (shared_reference / "co_hitran2016_6iso.par",), format="hitran")
+    return read_source(request).lines
 
 
 def test_the_one_line_out_of_place_in_a_published_list(hitran_lines):
