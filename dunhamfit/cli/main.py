@@ -37,6 +37,7 @@ COMMANDS = {
     "fit": ("dunhamfit.cli.fit", "Fit one set of constants to all lines of a job."),
     "refit": ("dunhamfit.cli.refit", "Repeat the latest run, with a new source or a changed choice."),
     "select": ("dunhamfit.cli.select", "Compare candidate sets of terms."),
+    "diagnose": ("dunhamfit.cli.diagnose", "Test the residuals; leave out sources and bands; bootstrap."),
     "sample": ("dunhamfit.cli.sample", "Sample the posterior of a run and store it in the archive."),
     "selftest": (
         "dunhamfit.cli.selftest",

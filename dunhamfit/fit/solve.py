@@ -20,6 +20,7 @@ from dunhamfit.fit.identify import check_rank, check_structure, floating_bands, 
 from dunhamfit.fit.model import Model, Prior
 from dunhamfit.fit.noise import Noise, as_stated, check_policy, estimate
 from dunhamfit.fit.record import Fit, Statistics
+from dunhamfit.fit.remarks import noise_remarks
 from dunhamfit.fit.robust import Reweighted, reweight
 from dunhamfit.lines.line_list import LineList
 from dunhamfit.molecule.isotopologue import Isotopologue
@@ -29,8 +30,6 @@ from dunhamfit.molecule.terms import BreakdownTerm, TermSet, parse_indices
 # The factor of well-conditioned rows is good to eps * condition; from here on it is sharpened, so
 # that every sigma keeps nine digits.
 _SHARPEN_ABOVE = 1e6
-# Outside these a noise factor is said in plain words.
-SMALL_FACTOR, LARGE_FACTOR = 0.5, 2.0
 
 
 def make_model(
@@ -64,9 +63,7 @@ def make_model(
         reference=Isotopologue.parse(reference, masses),
         terms=terms,
         breakdown=tuple(
-            BreakdownTerm(atom, *parse_indices(name))
-            for atom, names in (breakdown or {}).items()
-            for name in names
+            BreakdownTerm(atom, *parse_indices(name)) for atom, names in (breakdown or {}).items() for name in names
         ),
         calibration=tuple(s for s in calibrated if s.offset is not None or s.scale is not None),
         priors=MappingProxyType(dict(priors or {})),
@@ -156,9 +153,7 @@ class _Outcome:
     line_weights: np.ndarray | None = None
 
 
-def _plain(
-    lines: LineList, design: Design, rows: Rows, solution: Solution, rank: Rank, policy: str
-) -> _Outcome:
+def _plain(lines: LineList, design: Design, rows: Rows, solution: Solution, rank: Rank, policy: str) -> _Outcome:
     noise, allowance, weighted = as_stated(design.groups), None, rows
     if policy != "stated":
         noise, allowance = estimate(policy, rows.triangles(solution.values), design.groups, lines)
@@ -174,9 +169,7 @@ def _reweighted(model: Model, lines: LineList, rows: Rows, given: np.ndarray, fo
     weighted = _free_rows(model, design, given).reweighted(_row_factors(found.noise, rows))
     values = refine(weighted, weighted.triangle().r, found.values).values
     residual = rows.residuals(values).high
-    return _Outcome(
-        values, found.factor, residual, found.noise, found.log_likelihood, design, found.line_weights
-    )
+    return _Outcome(values, found.factor, residual, found.noise, found.log_likelihood, design, found.line_weights)
 
 
 def _free_rows(model: Model, design: Design, given: np.ndarray) -> Rows:
@@ -228,15 +221,4 @@ def _warnings(lines: LineList, design: Design, noise: Noise, rank: Rank) -> tupl
             f"bands {listed(floating)} share no vibrational level with the rest: only the form of the model, "
             "and no line, ties them to it"
         )
-    for name, factor, known in zip(noise.names, noise.factors, noise.determined, strict=True):
-        if not known:
-            texts.append(f"{name}: too few lines to tell a noise factor; the stated uncertainties are kept")
-        elif factor > LARGE_FACTOR:
-            texts.append(
-                f"{name}: the lines scatter {factor:.3g} times more than their stated uncertainties say"
-            )
-        elif factor < SMALL_FACTOR:
-            texts.append(
-                f"{name}: the lines scatter {1 / factor:.3g} times less than their stated uncertainties say"
-            )
-    return tuple(texts)
+    return (*texts, *noise_remarks(noise))

@@ -228,6 +228,31 @@ def systematics_document(findings: Sequence[Finding]) -> list[dict[str, object]]
     return [{**asdict(item), "z": item.z} for item in findings]
 
 
+def influence_document(fit: Fit, found: Influence) -> list[dict[str, object]]:
+    """Part of the variance of each constant from each source, for JSON."""
+    return [
+        {"name": item.name, "shares": dict(zip(found.labels, found.shares[:, index].tolist(), strict=True))}
+        for index, item in enumerate(fit.constants)
+    ]
+
+
+def dropped_document(fit: Fit, dropped: Sequence[DroppedGroup]) -> list[dict[str, object]]:
+    """The fit without each band or source: shifts of the constants, and how well it predicts what was left out."""
+    return [
+        {
+            "without": item.label,
+            "lines": item.lines,
+            "determined": item.determined,
+            "undetermined": list(item.undetermined),
+            "chi2": item.chi2,
+            "dof": item.dof,
+            "p": item.p,
+            "shifts": dict(zip((c.name for c in fit.constants), item.shifts[: len(fit.constants)], strict=True)),
+        }
+        for item in dropped
+    ]
+
+
 def _dropped_row(fit: Fit, item: DroppedGroup, count: int) -> tuple[str, ...]:
     if not item.determined:
         return (item.label, str(item.lines), "", "", "", "", "", "", ", ".join(item.undetermined))

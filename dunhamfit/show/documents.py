@@ -27,6 +27,7 @@ def fit_document(
     bands = summarise_bands(fit)
     return {
         "format": "dunhamfit-fit/1",
+        "isotopologue": fit.model.reference.name,
         "run": run,
         "parent": parent,
         "counts": {

@@ -7,6 +7,8 @@ import math
 from scipy.special import stdtrit
 
 from dunhamfit.fit.record import Fit
+from dunhamfit.inference.degrees import effective_degrees
+from dunhamfit.inference.weighted import is_tied
 
 _FACTORS = {
     "stated": "the stated uncertainties of the lines as they stand",
@@ -24,9 +26,7 @@ def policy_words(fit: Fit) -> str:
     """One sentence or two: contents, coverage and degrees of freedom of the sigmas of `fit`."""
     parts = [_FACTORS[fit.noise.policy]]
     shared = [
-        f"{item.kind} of {item.source} ({_prior_words(fit, item)})"
-        for item in fit.model.parameters
-        if item.source
+        f"{item.kind} of {item.source} ({_prior_words(fit, item)})" for item in fit.model.parameters if item.source
     ]
     if shared:
         parts.append(f"the shared {', '.join(shared)}")
@@ -34,12 +34,16 @@ def policy_words(fit: Fit) -> str:
         parts.append("no shared calibration error")
     text = f"sigma is 1 standard uncertainty (k = 1, {100 * _COVERAGE:.1f} %). It contains {' and '.join(parts)}."
     if fit.robust != "none":
-        text += f" Lines are weighted by the robust loss '{fit.robust}'."
+        text += f" Lines are weighted by the robust loss '{fit.robust}', and sigma is that of its sandwich covariance."
     dof = fit.statistics.dof
     text += f" Degrees of freedom: {dof}"
-    if fit.noise.policy != "stated" and 0 < dof < _LARGE_DOF:
-        factor = float(stdtrit(dof, 0.5 + _COVERAGE / 2))
-        text += f"; multiply sigma by Student's factor {factor:.3f} for {100 * _COVERAGE:.1f} %"
+    fewest = dof if is_tied(fit) else float(effective_degrees(fit)[: len(fit.constants)].min())
+    if fit.noise.policy != "stated" and 0 < fewest < _LARGE_DOF:
+        factor = float(stdtrit(fewest, 0.5 + _COVERAGE / 2))
+        text += (
+            f"; the noise factors rest on as few as {fewest:.0f} for one constant: multiply sigma by Student's factor, "
+            f"there {factor:.3f}, for {100 * _COVERAGE:.1f} %"
+        )
     return text + "."
 
 
