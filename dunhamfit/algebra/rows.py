@@ -115,7 +115,7 @@ class Rows:
                 rss=float(self.spread[g]),
                 log_sigma=float(self.log_sigma[g]),
             )
-            for g, (start, stop) in enumerate(pairwise(self.starts))
+            for g, (start, stop) in enumerate(pairwise(self.starts.tolist()))
         )
 
     def _blocks(self, start: int, stop: int, residual: np.ndarray):

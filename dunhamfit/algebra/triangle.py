@@ -17,11 +17,13 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
-from scipy.linalg.lapack import dgeqrt, dtrtri, dtrtrs
+from scipy.linalg.lapack import dgeqrf, dgeqrt, dtrtri, dtrtrs
 
 # Entries of a block that is reduced at once, and columns of a panel within it. So small, blocks stay in the
 # cache, and no step is large enough for OpenBLAS to start threads, which cost more here than they save.
 _BLOCK, _PANEL = 20_000, 8
+# Below so many entries panels cost more than they save.
+_SMALL = 5000
 
 
 @dataclass(frozen=True, eq=False)
@@ -115,14 +117,15 @@ def reduce_blocks(blocks, base, *, n: int, rss: float = 0.0, log_sigma: float = 
     base = np.asarray(base, dtype=float)
     columns = base.size
     above = np.empty((0, columns + 1))
+    below = np.tri(columns + 1, k=-1, dtype=bool)
     for rows, residual in blocks:
         kept = len(above)
         stacked = np.empty((kept + len(residual), columns + 1), order="F")
         stacked[:kept] = above
         stacked[kept:, :columns] = rows
         stacked[kept:, columns] = residual
-        panel = min(_PANEL, *stacked.shape)
-        above = np.triu(dgeqrt(panel, stacked, overwrite_a=True)[0][: columns + 1])
+        above = _factor(stacked)[: columns + 1]
+        above[below[: len(above)]] = 0.0
     height = min(len(above), columns)
     if len(above) > columns:
         rss += float(above[columns, columns]) ** 2
@@ -131,10 +134,18 @@ def reduce_blocks(blocks, base, *, n: int, rss: float = 0.0, log_sigma: float = 
     )
 
 
-def block_edges(start: int, stop: int, parameters: int) -> np.ndarray:
+def _factor(stacked: np.ndarray) -> np.ndarray:
+    """Householder QR in place: R on and above the diagonal."""
+    if stacked.size < _SMALL:
+        return dgeqrf(stacked, overwrite_a=True)[0]
+    return dgeqrt(min(_PANEL, *stacked.shape), stacked, overwrite_a=True)[0]
+
+
+def block_edges(start: int, stop: int, parameters: int) -> list[int]:
     """Edges of blocks of rows for `reduce_blocks`, of nearly equal length, from `start` to `stop`."""
     longest = max(_BLOCK // (parameters + 1) - (parameters + 1), 2 * (parameters + 1))
-    return np.linspace(start, stop, max(1, -(-(stop - start) // longest)) + 1).astype(int)
+    count = max(1, -(-(stop - start) // longest))
+    return [start + (stop - start) * i // count for i in range(count + 1)]
 
 
 def merge(triangles, base=None) -> Triangle:
