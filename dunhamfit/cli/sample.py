@@ -59,8 +59,7 @@ def command(
     side = SideFile(archive, number)
     if fresh:
         side.remove()
-    pieces = [*stored, *(unpack(block) for block in side.blocks())]
-    start = join(pieces) if pieces else None
+    start = _gone_on(stored, side)
     if start is not None and seed is not None and seed != start.seed:
         raise UsageError(
             f"the chain that is there has seed {start.seed}; leave out --seed, or begin again with --fresh"
@@ -77,7 +76,7 @@ def command(
             model=model,
             force=force,
             progress=report,
-            on_block=lambda piece: side.add(pack(piece)),
+            on_block=_Keeper(side, 0 if start is None else len(start.chain)),
         )
     with open_archive(archive, mode="a") as store:
         store.save_posterior(number, pack(posterior), units=ARRAY_UNITS)
@@ -97,3 +96,27 @@ def _stored(store: Archive, number: int) -> list[Posterior]:
     """The posterior that the archive holds of a run, if any."""
     summary = next(item for item in store.runs() if item.run == number)
     return [unpack(store.posterior(number))] if summary.posterior else []
+
+
+class _Keeper:
+    """Puts every finished block into the side file, with the step at which it begins."""
+
+    def __init__(self, side: SideFile, first_step: int):
+        self.side = side
+        self.first_step = first_step
+
+    def __call__(self, piece: Posterior) -> None:
+        self.side.add({**pack(piece), "first_step": self.first_step})
+        self.first_step += len(piece.chain)
+
+
+def _gone_on(stored: list[Posterior], side: SideFile) -> Posterior | None:
+    """The stored chain with the blocks that go on from it.
+
+    A process that was killed after it had stored its chain leaves blocks that the chain holds already.
+    """
+    pieces = list(stored)
+    for block in side.blocks():
+        if int(block["first_step"]) == sum(len(piece.chain) for piece in pieces):
+            pieces.append(unpack(block))
+    return join(pieces) if pieces else None

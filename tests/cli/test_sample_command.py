@@ -109,3 +109,12 @@ def _side(archive: Path) -> bool:
 def _sampled(archive: Path) -> bool:
     with open_archive(archive) as store:
         return store.runs()[0].posterior
+
+
+def test_blocks_that_the_archive_holds_already_are_not_taken_twice(archive, monkeypatch):
+    """As after a kill between storing the chain and taking its blocks away."""
+    monkeypatch.setattr("dunhamfit.archive.side_file.SideFile.remove", lambda self: None)
+    assert main(["sample", str(archive), "--seed", "7", "--total", "2048", "--quiet"]) in (0, 5)
+    once = chain(archive)
+    assert main(["sample", str(archive), "--total", "2048", "--quiet"]) in (0, 5)
+    assert np.array_equal(chain(archive), once)
