@@ -83,10 +83,10 @@ class Matrix:
     def rounded(self, start: int, stop: int) -> np.ndarray:
         """Every entry of some lines as the nearest float or its neighbour, shape (p, stop - start)."""
         plus, minus = self.plus[start:stop], self.minus[start:stop]
-        table, own = self.table.joined, self.own.joined
+        table, own = self.table.whole, self.own.whole
         entries = np.empty((self.shape[0], stop - start))
         shared, others = entries[: len(table.high)], entries[len(table.high) :]
-        # The difference of joined slices is exact, so that nothing is lost where levels nearly cancel.
+        # Where levels nearly cancel, the first difference is exact and the second holds what it lacks.
         np.subtract(table.high.take(plus, axis=1), table.high.take(minus, axis=1), out=shared)
         shared += table.low.take(plus, axis=1) - table.low.take(minus, axis=1)
         np.add(own.high[:, start:stop], own.low[:, start:stop], out=others)
@@ -107,8 +107,8 @@ class Matrix:
     def rough_product(self, values: np.ndarray) -> np.ndarray:
         """matrix^T values in plain float64, for steps too small to need more, shape (n,)."""
         shared = len(self.table.exponent)
-        level = values[:shared] @ self.table.joined.high
-        return level[self.plus] - level[self.minus] + values[shared:] @ self.own.joined.high
+        level = values[:shared] @ self.table.whole.high
+        return level[self.plus] - level[self.minus] + values[shared:] @ self.own.whole.high
 
     def product(self, weights: Extended) -> np.ndarray:
         """matrix @ weights, summed well beyond double precision before the last rounding, shape (p,).

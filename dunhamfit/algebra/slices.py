@@ -8,7 +8,6 @@ S. Oishi and S. M. Rump, Numer. Algorithms 59, 95 (2012)).
 from __future__ import annotations
 
 from dataclasses import dataclass
-from functools import cached_property
 
 import numpy as np
 
@@ -21,6 +20,8 @@ class Slices:
 
     Attributes
     ----------
+    whole : Extended, shape (p, m)
+        The matrix as it was given.
     first, second, rest : ndarray of float, shape (p, m)
         Multiples of 2^-bits, multiples of 4^-bits, and what is left.
     exponent : ndarray of int, shape (p,)
@@ -28,6 +29,7 @@ class Slices:
         Width of a slice.
     """
 
+    whole: Extended
     first: np.ndarray
     second: np.ndarray
     rest: np.ndarray
@@ -40,7 +42,7 @@ class Slices:
         largest = np.maximum(matrix.high.max(axis=1, initial=0.0), -matrix.high.min(axis=1, initial=0.0))
         exponent = np.where(largest > 0, np.frexp(largest)[1], 0)
         shrink = np.ldexp(1.0, -exponent)[:, None]  # a power of two, so that scaling is exact
-        return cls(*_cut(matrix.high * shrink, matrix.low * shrink, bits), exponent, bits)
+        return cls(matrix, *_cut(matrix.high * shrink, matrix.low * shrink, bits), exponent, bits)
 
     @property
     def shape(self) -> tuple[int, int]:
@@ -50,22 +52,19 @@ class Slices:
     def parts(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         return self.first, self.second, self.rest
 
-    @cached_property
-    def joined(self) -> Extended:
-        """The matrix itself: the two slices joined, which is exact, and the rest."""
-        scale = np.ldexp(1.0, self.exponent)[:, None]
-        return Extended(scale * (self.first + self.second), scale * self.rest)
-
     def with_columns(self, more: np.ndarray) -> Slices:
         """The matrix with further columns, given as floats, shape (p, more)."""
         shrunk = more * np.ldexp(1.0, -self.exponent)[:, None]
-        extra = _cut(shrunk, np.zeros_like(shrunk), self.bits)
-        parts = (np.concatenate(pair, axis=1) for pair in zip(self.parts, extra, strict=True))
-        return Slices(*parts, self.exponent, self.bits)
+        extra = more, np.zeros_like(more), *_cut(shrunk, np.zeros_like(more), self.bits)
+        high, low, *parts = (
+            np.concatenate(pair, axis=1) for pair in zip((*self.whole, *self.parts), extra, strict=True)
+        )
+        return Slices(Extended(high, low), *parts, self.exponent, self.bits)
 
     def chosen(self, rows: np.ndarray) -> Slices:
         """The matrix that has only the given first indices."""
-        return Slices(*(part[rows] for part in self.parts), self.exponent[rows], self.bits)
+        whole = self.whole.take(rows, axis=0)
+        return Slices(whole, *(part[rows] for part in self.parts), self.exponent[rows], self.bits)
 
     def transposed_product(self, values: np.ndarray) -> Extended:
         """matrix^T values to some 28 digits of its largest term, shape (m,).
