@@ -159,7 +159,7 @@ def level_columns(model: Model, isotopologues, code, v, j) -> Extended:
 
 
 def _pool(lines: LineList, used: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Order of the used lines by group and transition, first line of each transition, row of each line."""
+    """Order of the used lines by group and transition, where each transition starts, row of each line."""
     v_upper, v_lower = lines.v_upper[used], lines.v_lower[used]
     j_upper, j_lower = lines.j_upper[used], lines.j_lower[used]
     v_width = int(max(v_upper.max(), v_lower.max())) + 1
@@ -168,7 +168,7 @@ def _pool(lines: LineList, used: np.ndarray) -> tuple[np.ndarray, np.ndarray, np
     for column, width in ((v_upper, v_width), (v_lower, v_width), (j_upper, j_width), (j_lower, j_width)):
         key *= width
         key += column
-    order = np.argsort(key, kind="stable")
+    order = np.argsort(key)  # not stable, but several times faster: which repeat comes first does not matter
     new = _changes(key[order])
     row_of = np.empty(len(order), dtype=np.int64)
     row_of[order] = np.cumsum(new) - 1
@@ -181,7 +181,7 @@ def _group(lines: LineList, leading: np.ndarray, repeats: np.ndarray) -> tuple[G
     Parameters
     ----------
     leading : ndarray of int, shape (rows,)
-        First line of each row.
+        One line of each row.
     repeats : ndarray of int, shape (rows,)
         Number of lines of each row.
     """
@@ -203,7 +203,7 @@ def _changes(*columns: np.ndarray) -> np.ndarray:
 def _pooled(position, weights, order, firsts, row_of) -> tuple[Extended, np.ndarray, np.ndarray | None]:
     """Weighted mean, 1 / sigma and within sum of squares (by line) of repeats.
 
-    Means are taken of differences from the first repeat: the whole positions would lose
+    Means are taken of differences from one of the repeats: the whole positions would lose
     what repeats have gained.
     """
     if len(firsts) == len(order):
