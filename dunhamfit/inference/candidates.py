@@ -80,9 +80,9 @@ class Board:
         self.wide = wide
         count = len(wide.groups)
         scaled = [t.scaled(f) for t, f in zip(wide.triangles[:count], wide.noise.by_group, strict=True)]
-        whole = merge([*scaled, *wide.triangles[count:]])
         self.free = np.flatnonzero(~wide.model.fixed)
-        self.r, self.z, self.rss, self.n = whole.r[:, self.free], whole.z, whole.rss, whole.n
+        whole = merge([*scaled, *wide.triangles[count:]]).chosen(self.free)
+        self.r, self.z, self.rss, self.n = whole.r, whole.z, whole.rss, whole.n
         self.base, self.log_sigma = wide.values[self.free], whole.log_sigma
         parameters = [wide.model.parameters[i] for i in self.free]
         self._kind = [item.kind for item in parameters]
@@ -149,7 +149,7 @@ class _Bands:
         width = r.shape[1]
         shares, residuals, outside = [], [], []
         for item in triangles:
-            share = solve_triangular(r[:width], item.r[:, free].T, trans=1, check_finite=False).T
+            share = solve_triangular(r, item.r[:, free].T, trans=1, check_finite=False).T
             rotation, reduced, pivots = qr(share, mode="full", pivoting=True, check_finite=False)
             rank = max(int(np.sum(np.abs(np.diag(reduced)) > 1e-11)), 1)
             rotated = rotation.T @ item.z
