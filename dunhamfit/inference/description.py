@@ -48,7 +48,7 @@ def priors(fit: Fit, frame: Frame, errors: LineErrors | None, factor_range: tupl
     return tuple(texts)
 
 
-def notes(fit: Fit, frame: Frame, errors: LineErrors | None, *, exact: bool) -> tuple[str, ...]:
+def notes(fit: Fit, frame: Frame, *, exact: bool) -> tuple[str, ...]:
     """What is held, and what the result leaves out."""
     texts = []
     if exact:
@@ -62,11 +62,6 @@ def notes(fit: Fit, frame: Frame, errors: LineErrors | None, *, exact: bool) -> 
     held = [name for name, known in zip(fit.noise.names, fit.noise.determined, strict=True) if not known]
     if held:
         texts.append(f"noise factor held, too few lines to tell it: {', '.join(held)}")
-    if fit.robust != "none" and errors is None:
-        texts.append(
-            f"the line weights of the robust fit ({fit.robust}) are taken as they are; what they add to the "
-            "uncertainty is not in this posterior. The error models 'student' and 'outliers' include it"
-        )
     few = [name for name, degrees in zip(frame.noise_names, frame.noise_degrees, strict=True) if degrees < _FEW_DEGREES]
     if few:
         texts.append(

@@ -60,7 +60,4 @@ def _terms(fit: Fit) -> str:
 
 def _errors(fit: Fit, error_model: str, factor_range: tuple[float, float]) -> str:
     noise = fit.noise
-    parts = [error_model, tuple(map(float, factor_range)), noise.policy, tuple(noise.names), noise.determined]
-    if fit.line_weights is not None and error_model == "gaussian":
-        parts.append(fit.line_weights)
-    return _digest(*parts)
+    return _digest(error_model, tuple(map(float, factor_range)), noise.policy, tuple(noise.names), noise.determined)

@@ -99,7 +99,7 @@ class MarginalTarget:
 
     walkers = 16
     # The start is close to the posterior already; the chain forgets it within a few steps.
-    warm_up = 50
+    warm_up = 20
 
     def __init__(self, triangles: tuple[Triangle, ...], frame: Frame, factor_range: tuple[float, float]):
         self.frame = frame

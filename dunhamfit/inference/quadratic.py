@@ -54,7 +54,6 @@ def draw(factors: np.ndarray, random: np.random.RandomState) -> np.ndarray:
     size = factors.shape[1] - 1
     u = factors[:, size, :size] + random.standard_normal((len(factors), size))
     for j in range(size - 1, -1, -1):
-        if j < size - 1:
-            u[:, j] -= np.einsum("wi,wi->w", factors[:, j + 1 : size, j], u[:, j + 1 :])
         u[:, j] /= factors[:, j, j]
+        u[:, :j] -= factors[:, j, :j] * u[:, j : j + 1]
     return u

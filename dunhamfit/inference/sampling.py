@@ -30,7 +30,7 @@ _ENSEMBLES = 4
 # Steps handed over at a time; no number depends on it.
 _BLOCK = 50
 # Steps before the first judgement of the length, and the most that the default takes.
-_FIRST_STEPS, _MOST_STEPS = 100, 5000
+_FIRST_STEPS, _MOST_STEPS = 120, 5000
 # Draws from which the probability of being bad is averaged, at the most.
 _MOST_FOR_LINES = 2000
 
@@ -85,7 +85,8 @@ def sample(
     Raises
     ------
     UsageError
-        If `start` belongs to other lines, terms or another error model, or the call contradicts itself.
+        If `start` belongs to other lines, terms or another error model, the call contradicts itself, the fit
+        has relations between terms, or Gaussian errors are asked for a robust fit.
     """
     _check(model, seed=seed, total=total, more=more, start=start, factor_range=factor_range)
     setup = _set_up(fit, model, factor_range)
@@ -133,6 +134,12 @@ def _set_up(fit: Fit, model: str, factor_range: tuple[float, float]) -> _Setup:
     frame = make_frame(fit)
     errors, target = None, None
     if model == "gaussian":
+        if fit.robust != "none":
+            raise UsageError(
+                f"this fit is robust (loss '{fit.robust}'): it does not take its errors for Gaussian, and Gaussian "
+                "errors would lose what it guards against. Sample with the error model 'student' or 'outliers', or "
+                "fit without a robust loss"
+            )
         if frame.factors:
             target = MarginalTarget(fit.triangles, frame, factor_range)
     else:
@@ -161,7 +168,7 @@ def _begin(setup: _Setup, seed: int | None) -> Posterior:
         identity=_identity(setup),
         factor_range=tuple(map(float, setup.factor_range)),
         priors=description.priors(setup.fit, setup.frame, setup.errors, setup.factor_range),
-        notes=description.notes(setup.fit, setup.frame, setup.errors, exact=exact),
+        notes=description.notes(setup.fit, setup.frame, exact=exact),
         exact=exact,
     )
 

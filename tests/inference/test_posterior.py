@@ -192,6 +192,19 @@ def test_calls_that_contradict_themselves(fit, options, text):
         sample(fit, **options)
 
 
+def test_gaussian_errors_are_refused_for_a_robust_fit(fit):
+    robust = fit_lines(fit.lines, TERMS, reference="28Si32S", policy="per-source", robust="huber")
+    with pytest.raises(UsageError, match=r"robust .loss 'huber'.*'student' or 'outliers'"):
+        sample(robust)
+    assert sample(robust, seed=1, total=1, model="student").total > 0
+
+
+def test_relations_between_terms_are_refused(fit):
+    tied = replace(fit, factor=np.array(fit.factor[:, :-1]))
+    with pytest.raises(UsageError, match="5 of them but only 4 independent directions"):
+        sample(tied)
+
+
 def test_the_seed_of_a_chain_is_not_changed(fit, settled):
     with pytest.raises(UsageError, match="was started with seed 5"):
         sample(fit, start=settled, more=STEP, seed=6)
