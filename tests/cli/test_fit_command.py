@@ -80,7 +80,8 @@ nan,0.001,1,0,R,12,28Si32S
     (tmp_path / "faulty.csv").write_text(rows, encoding="utf-8")
     job = tmp_path / "job.toml"
     job.write_text(
-        '[molecule]\nreference = "28Si32S"\n[[source]]\nname = "faulty"\nfile = "faulty.csv"\n[model]\nterms = [1, 0]\n',
+        '[molecule]\nreference = "28Si32S"\n[[source]]\nname = "faulty"\nfile = "faulty.csv"\n'
+        "[model]\nterms = [1, 0]\n",
         encoding="utf-8",
     )
     for command in ("check", "fit"):

@@ -155,7 +155,7 @@ def test_reduced_mass_reproduces_published_mass_scaling(shared_reference):
     read = {"delimiter": ",", "skip_header": 1}
     universal = np.genfromtxt(shared_reference / "co_farrenq1991_U_delta.csv", **read)
     published = np.genfromtxt(shared_reference / "co_farrenq1991_Y_13C16O.csv", **read)
-    for k, l in ((1, 0), (2, 0), (0, 1)):  # noqa: E741
+    for k, l in ((1, 0), (2, 0), (0, 1)):
         u, delta_c, delta_o = universal[(universal[:, 0] == k) & (universal[:, 1] == l)][0, 2:]
         value = published[(published[:, 0] == k) & (published[:, 1] == l)][0, 2]
         first, second = (float(mass.value) for mass in molecule.masses)
