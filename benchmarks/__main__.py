@@ -22,6 +22,7 @@ BENCHMARKS = {
     "refit": ((), "a band added to an archive of a million lines against the first fit"),
     "coverage": ((), "how often the error bars hold the truth, over simulated campaigns"),
     "outliers": ((), "robust fits and the ledger of outliers, over simulated lists"),
+    "selection": ((), "what comparing sets of terms costs, and how often the true one is found"),
     "posterior": (("speed",), "effective samples a second, against emcee as its manual sets it up"),
 }
 

@@ -17,13 +17,13 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg import qr, solve_triangular
+from scipy.linalg import qr
 
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge
 from dunhamfit.fit.record import Fit
 from dunhamfit.inference.resample import band_labels
-from dunhamfit.molecule.terms import Term, TermSet
+from dunhamfit.molecule.terms import TermSet
 
 # Smallest pivot of I - H_g below which the rest of the bands cannot predict band g.
 _ALONE = 1e-9
@@ -74,7 +74,7 @@ class Candidate:
 
 
 class Board:
-    """The wide fit in orthonormal coordinates, and the candidates judged so far."""
+    """The wide fit in orthonormal coordinates, in which candidates are judged."""
 
     def __init__(self, wide: Fit):
         self.wide = wide
@@ -86,21 +86,15 @@ class Board:
         self.base, self.log_sigma = wide.values[self.free], whole.log_sigma
         parameters = [wide.model.parameters[i] for i in self.free]
         self._kind = [item.kind for item in parameters]
-        self._term = [None if item.source else Term(item.k, item.l) for item in parameters]
+        self._pair = [None if item.source else (item.k, item.l) for item in parameters]
         labels, self.bands = band_labels(wide)
         groups = [merge([t for t, of in zip(scaled, labels, strict=True) if of == b]) for b in range(len(self.bands))]
         self._stack = _Bands(groups, self.r, self.free)
-        self.seen: dict[TermSet, Candidate] = {}
 
     def judge(self, terms: TermSet) -> Candidate:
         """The candidate with these terms, a subset of those of the wide fit."""
-        if terms not in self.seen:
-            self.seen[terms] = self._judge(terms)
-        return self.seen[terms]
-
-    def _judge(self, terms: TermSet) -> Candidate:
-        inside = set(terms)
-        kept = np.array([term is None or term in inside for term in self._term])
+        inside = {(term.k, term.l) for term in terms}
+        kept = np.array([pair is None or pair in inside for pair in self._pair])
         # Left-out columns are fixed at zero: residuals about the wide solution, then those of the candidate.
         target = self.z + self.r[:, ~kept] @ self.base[~kept]
         basis, r = np.linalg.qr(self.r[:, kept])
@@ -132,14 +126,13 @@ class Board:
             condition=float(singular[0] / singular[-1]),
         )
 
-    def _smallest_t(self, inside: set[Term], kept: np.ndarray, t: np.ndarray) -> float:
-        places = np.flatnonzero(kept)
+    def _smallest_t(self, inside: set[tuple[int, int]], kept: np.ndarray, t: np.ndarray) -> float:
         tops = [
             size
-            for place, size in zip(places, t, strict=True)
-            if self._kind[place] == "term" and Term(self._term[place].k + 1, self._term[place].l) not in inside
+            for place, size in zip(np.flatnonzero(kept).tolist(), t.tolist(), strict=True)
+            if self._kind[place] == "term" and (self._pair[place][0] + 1, self._pair[place][1]) not in inside
         ]
-        return float(min(tops, default=np.inf))
+        return min(tops, default=np.inf)
 
 
 class _Bands:
@@ -148,8 +141,9 @@ class _Bands:
     def __init__(self, triangles: list[Triangle], r: np.ndarray, free: np.ndarray):
         width = r.shape[1]
         shares, residuals, outside = [], [], []
+        inverse = covariance_factor(r)
         for item in triangles:
-            share = solve_triangular(r, item.r[:, free].T, trans=1, check_finite=False).T
+            share = item.r[:, free] @ inverse
             rotation, reduced, pivots = qr(share, mode="full", pivoting=True, check_finite=False)
             rank = max(int(np.sum(np.abs(np.diag(reduced)) > 1e-11)), 1)
             rotated = rotation.T @ item.z
@@ -179,13 +173,26 @@ class _Bands:
         step : ndarray of float, shape (p wide,)
             R (c - base) of the candidate, in the coordinates of R.
         """
+        # A product for each band: BLAS would split one large product over threads, at more than it saves.
         residual = self.shares @ step - self.z
         own = self.shares @ basis
         lower = np.linalg.cholesky(self._identity - own @ own.transpose(0, 2, 1))
         pivots = np.einsum("gii->gi", lower)
         alone = pivots.min(axis=1) ** 2 < _ALONE
-        half = np.linalg.solve(lower, residual[:, :, None])
-        predicted = np.linalg.solve(lower.transpose(0, 2, 1), half)
-        errors = (predicted[:, :, 0] ** 2).sum(axis=1) + self.outside
-        density = np.log(pivots).sum(axis=1) - 0.5 * ((half[:, :, 0] ** 2).sum(axis=1) + self.outside)
+        half, predicted = _substitute(lower, residual)
+        errors = (predicted**2).sum(axis=1) + self.outside
+        density = np.log(pivots).sum(axis=1) - 0.5 * ((half**2).sum(axis=1) + self.outside)
         return np.where(alone, np.inf, errors), np.where(alone, -np.inf, density)
+
+
+def _substitute(lower: np.ndarray, right: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """L^-1 b and L^-T L^-1 b for many triangles at once, shapes (bands, m, m) and (bands, m)."""
+    half = right.copy()
+    for i in range(half.shape[1]):
+        half[:, i] -= np.einsum("gj,gj->g", lower[:, i, :i], half[:, :i])
+        half[:, i] /= lower[:, i, i]
+    whole = half.copy()
+    for i in reversed(range(half.shape[1])):
+        whole[:, i] /= lower[:, i, i]
+        whole[:, :i] -= lower[:, i, :i] * whole[:, i, None]
+    return half, whole

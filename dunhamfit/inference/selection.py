@@ -133,7 +133,7 @@ def compare_sets(wide: Fit, *, progress: Callable[[int, int], None] | None = Non
     near_forward = search.climb(low, search.larger)
     for start in (near_forward, search.widest):
         search.climb(search.climb(start, search.smaller), search.larger)
-    candidates = tuple(sorted(search.board.seen.values(), key=lambda item: (item.parameters, item.bic)))
+    candidates = tuple(sorted(search.seen.values(), key=lambda item: (item.parameters, item.bic)))
     lowest = min(item.bic for item in candidates)
     near = tuple(sorted((item for item in candidates if item.bic <= lowest + NEAR_BIC), key=lambda item: item.bic))
     best = _recommended(near)
@@ -209,16 +209,18 @@ class _Search:
         model = board.wide.model
         self.own = [term for term in model.terms if term.name in model.priors]
         self.widest = _tops(model.terms)
+        self.seen: dict[tuple[int, ...], Candidate] = {}
 
     def lowest(self) -> tuple[int, ...]:
         """Y10 and Y01, as far as the wide set has them."""
         return tuple(min(top, 1 - l) if l < 2 else -1 for l, top in enumerate(self.widest))
 
     def judge(self, tops: tuple[int, ...]) -> Candidate:
-        found = self.board.judge(TermSet([*TermSet.from_orders(tops), *self.own]))
-        if self.progress:
-            self.progress(len(self.board.seen), len(self.board.seen))
-        return found
+        if tops not in self.seen:
+            self.seen[tops] = self.board.judge(TermSet([*TermSet.from_orders(tops), *self.own]))
+            if self.progress:
+                self.progress(len(self.seen), len(self.seen))
+        return self.seen[tops]
 
     def climb(self, here: tuple[int, ...], neighbours) -> tuple[int, ...]:
         """Move to the neighbour of lowest BIC as long as one is lower."""
