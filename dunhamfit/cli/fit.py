@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from pathlib import Path
 
 import click
@@ -9,7 +10,7 @@ import click
 from dunhamfit.archive.store import open_archive
 from dunhamfit.cli.output import Output, json_option, quiet_option
 from dunhamfit.fit.record import Fit
-from dunhamfit.inference.ledger import make_ledger
+from dunhamfit.inference.ledger import Ledger, make_ledger
 from dunhamfit.job.again import origin_of
 from dunhamfit.job.run import fit_job, read_job_lines
 from dunhamfit.job.tables import Job, read_job
@@ -17,6 +18,7 @@ from dunhamfit.lines.faults import raise_faults
 from dunhamfit.show.documents import fit_document
 from dunhamfit.show.fit_report import fit_tables
 from dunhamfit.show.ledger_report import ledger_document, ledger_tables
+from dunhamfit.show.tables import Table
 
 
 @click.command()
@@ -52,7 +54,16 @@ def run_fit(job: Job, archive: Path | None, output: Output) -> Fit:
     for text in fit.warnings:
         output.warn(text)
     ledger = make_ledger(fit, refit=lambda lines: fit_job(job, lines))
-    document = fit_document(fit, run=run, parent=parent, notices=reading.notices)
-    output.result(document | {"ledger": ledger_document(ledger)}, (*fit_tables(fit), *ledger_tables(ledger)))
+    document: dict[str, object] = {}
+    if output.wants_document:
+        document = fit_document(fit, run=run, parent=parent, notices=reading.notices)
+        document["ledger"] = ledger_document(ledger)
+    output.result(document, _tables(fit, ledger))
     output.remark(f"run {run} stored in {path}")
     return fit
+
+
+def _tables(fit: Fit, ledger: Ledger) -> Iterator[Table]:
+    """All tables of a fit, made only where they are shown."""
+    yield from fit_tables(fit)
+    yield from ledger_tables(ledger)

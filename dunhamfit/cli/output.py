@@ -95,6 +95,11 @@ class Output:
             colour = is_terminal(self.stdout) and not os.environ.get("NO_COLOR")
             write(parts_text(parts, width=terminal_width(self.stdout), colour=colour), self.stdout)
 
+    @property
+    def wants_document(self) -> bool:
+        """Whether the result goes out as a document, so that a costly one need not be made for nothing."""
+        return self.as_json or self.path is not None
+
     def remark(self, text: str) -> None:
         """Say something in passing; `--quiet` silences it."""
         if not self.quiet:
@@ -160,7 +165,17 @@ def json_text(document: Mapping[str, object]) -> str:
     TypeError
         If the document holds anything else that JSON does not know.
     """
-    return json.dumps(_plain(document), indent=1, allow_nan=False) + "\n"
+    try:
+        return json.dumps(document, allow_nan=False, default=_from_numpy) + "\n"
+    except ValueError:  # a number that is not finite stands somewhere
+        return json.dumps(_plain(document), allow_nan=False) + "\n"
+
+
+def _from_numpy(item: object) -> object:
+    """Numpy's numbers and arrays as plain ones; what else JSON does not know is a TypeError."""
+    if hasattr(item, "tolist"):
+        return item.tolist()
+    raise TypeError(f"{type(item).__name__} cannot be written as JSON")
 
 
 def _plain(item: object) -> object:

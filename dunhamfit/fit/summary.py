@@ -67,25 +67,29 @@ class SourceSummary:
 def summarise_bands(fit: Fit) -> tuple[BandSummary, ...]:
     """One summary for each band of each isotopologue, in the order of isotopologues and v', v''."""
     lines = fit.lines
-    order = np.stack([lines.isotopologue, lines.v_upper, lines.v_lower])
-    bands, member = np.unique(order, axis=1, return_inverse=True)
+    width = int(max(lines.v_upper.max(initial=0), lines.v_lower.max(initial=0))) + 1
+    key = (lines.isotopologue.astype(np.int64) * width + lines.v_upper) * width + lines.v_lower
+    # The lines of a band stand together in this order, so that no band has to look for its own among all.
+    order = np.argsort(key, kind="stable")
+    firsts = np.flatnonzero(np.diff(key[order], prepend=-1))
     found = []
-    for number, (code, v_upper, v_lower) in enumerate(bands.T):
-        of_band = member == number
-        chosen = of_band & lines.used
+    for of_band in np.split(order, firsts[1:]) if len(order) else []:
+        first = of_band[0]
+        code, v_upper, v_lower = lines.isotopologue[first], lines.v_upper[first], lines.v_lower[first]
+        chosen = of_band[lines.used[of_band]]
         residual = fit.residuals[chosen]
         found.append(
             BandSummary(
                 isotopologue=lines.isotopologues[code],
                 v_upper=int(v_upper),
                 v_lower=int(v_lower),
-                lines=int(of_band.sum()),
-                used=int(chosen.sum()),
-                j_min=int(lines.j_lower[chosen].min(initial=2**30)) if chosen.any() else -1,
+                lines=len(of_band),
+                used=len(chosen),
+                j_min=int(lines.j_lower[chosen].min()) if len(chosen) else -1,
                 j_max=int(lines.j_lower[chosen].max(initial=-1)),
                 rms=_rms(residual),
                 weighted_rms=_rms(residual / lines.sigma[chosen]),
-                mean_residual=float(residual.mean()) if chosen.any() else float("nan"),
+                mean_residual=float(residual.mean()) if len(chosen) else float("nan"),
             )
         )
     return tuple(found)

@@ -112,6 +112,7 @@ def sources_table(fit: Fit) -> Table:
 
 def bands_table(fit: Fit) -> Table:
     """Bands: lines, J range, residuals."""
+    bands = summarise_bands(fit)
     rows = [
         (
             item.isotopologue,
@@ -123,10 +124,10 @@ def bands_table(fit: Fit) -> Table:
             _number(item.weighted_rms, digits=3),
             _number(item.mean_residual, digits=2),
         )
-        for item in summarise_bands(fit)
+        for item in bands
         if item.used
     ]
-    unused = sum(1 for item in summarise_bands(fit) if not item.used)
+    unused = sum(1 for item in bands if not item.used)
     columns = (
         Column("isotopologue"),
         Column("band"),
