@@ -24,6 +24,8 @@ _FUNCTIONS = {
     "abs": (abs, lambda x: math.copysign(1.0, x)),
 }
 _LONGEST = 500
+# Levels of nesting, which a sum of as many terms has too; far below what Python can walk.
+_DEEPEST = 60
 
 
 @dataclass(frozen=True)
@@ -59,7 +61,11 @@ class Expression:
             Where a value has no result, such as a division by zero.
         """
         try:
-            return _walk(self.tree, known)
+            with np.errstate(all="ignore"):
+                result = _walk(self.tree, known)
+            if not (math.isfinite(result.value) and np.all(np.isfinite(result.gradient))):
+                raise OverflowError("it or its slope is not finite")
+            return result
         except (ZeroDivisionError, ValueError, OverflowError) as error:
             raise UsageError(f"relation '{self.text}' has no value at the constants reached: {error}") from None
 
@@ -84,7 +90,7 @@ def parse_expression(text: object, *, names) -> Expression:
         tree = ast.parse(text, mode="eval").body
     except (SyntaxError, ValueError, RecursionError, MemoryError):
         raise UsageError(f"relation '{text}' is not an expression; allowed are {_ALLOWED}") from None
-    used = _check(tree, text)
+    used = _check(tree, text, _DEEPEST)
     unknown = sorted(used - set(names))
     if unknown:
         raise UsageError(
@@ -93,19 +99,21 @@ def parse_expression(text: object, *, names) -> Expression:
     return Expression(text, frozenset(used), tree)
 
 
-def _check(node: ast.expr, text: str) -> set[str]:
-    """Names below a node; raise UsageError for any kind of node that is not allowed."""
+def _check(node: ast.expr, text: str, depth: int) -> set[str]:
+    """Names below a node; raise UsageError for a kind of node that is not allowed or more than `depth` levels."""
+    if not depth:
+        raise UsageError(f"relation '{text}' is nested more than {_DEEPEST} levels deep; write it shorter")
     match node:
         case ast.Constant(value=int() | float() as value) if not isinstance(value, bool):
             return set()
         case ast.Name(id=name):
             return {name}
         case ast.UnaryOp(op=ast.UAdd() | ast.USub(), operand=inner):
-            return _check(inner, text)
+            return _check(inner, text, depth - 1)
         case ast.BinOp(left=left, op=ast.Add() | ast.Sub() | ast.Mult() | ast.Div() | ast.Pow(), right=right):
-            return _check(left, text) | _check(right, text)
+            return _check(left, text, depth - 1) | _check(right, text, depth - 1)
         case ast.Call(func=ast.Name(id=name), args=[inner], keywords=[]) if name in _FUNCTIONS:
-            return _check(inner, text)
+            return _check(inner, text, depth - 1)
     raise UsageError(f"relation '{text}': {ast.unparse(node)!r} is not allowed; allowed are {_ALLOWED}")
 
 
