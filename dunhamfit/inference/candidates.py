@@ -20,7 +20,7 @@ import numpy as np
 from scipy.linalg import qr
 
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
-from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge
+from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge, reduce_rows
 from dunhamfit.fit.record import Fit
 from dunhamfit.inference.resample import band_labels
 from dunhamfit.molecule.terms import TermSet
@@ -81,15 +81,21 @@ class Board:
         count = len(wide.groups)
         scaled = [t.scaled(f) for t, f in zip(wide.triangles[:count], wide.noise.by_group, strict=True)]
         self.free = np.flatnonzero(~wide.model.fixed)
-        whole = merge([*scaled, *wide.triangles[count:]]).chosen(self.free)
-        self.r, self.z, self.rss, self.n = whole.r, whole.z, whole.rss, whole.n
-        self.base, self.log_sigma = wide.values[self.free], whole.log_sigma
+        labels, self.bands = band_labels(wide)
+        groups = [merge([t for t, of in zip(scaled, labels, strict=True) if of == b]) for b in range(len(self.bands))]
+        items = [*groups, *wide.triangles[count:]]
+        residual = np.concatenate([item.z for item in items])
+        shares, self.r = _orthonormal(np.concatenate([item.r[:, self.free] for item in items]))
+        self.z = shares.T @ residual
+        outside = residual - shares @ self.z
+        self.rss = float(sum(item.rss for item in items) + outside @ outside)
+        self.n = sum(item.n for item in items)
+        self.log_sigma = float(sum(item.log_sigma for item in items))
+        self.base = wide.values[self.free]
+        self._stack = _Bands(groups, shares)
         parameters = [wide.model.parameters[i] for i in self.free]
         self._kind = [item.kind for item in parameters]
         self._pair = [None if item.source else (item.k, item.l) for item in parameters]
-        labels, self.bands = band_labels(wide)
-        groups = [merge([t for t, of in zip(scaled, labels, strict=True) if of == b]) for b in range(len(self.bands))]
-        self._stack = _Bands(groups, self.r, self.free)
 
     def judge(self, terms: TermSet) -> Candidate:
         """The candidate with these terms, a subset of those of the wide fit."""
@@ -135,15 +141,26 @@ class Board:
         return min(tops, default=np.inf)
 
 
+def _orthonormal(rows: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Q and R of the rows. The second round makes Q orthonormal to eps, however ill-conditioned R is."""
+    factor, total = rows, np.eye(rows.shape[1])
+    for _ in range(2):
+        r = reduce_rows(factor, np.zeros(len(rows)), np.zeros(len(total)), n=0).r
+        inverse = covariance_factor(r)
+        # In pieces that no BLAS splits over threads, which cost more than they save here.
+        pieces = np.array_split(factor, max(len(rows) // len(total), 1))
+        factor, total = np.concatenate([piece @ inverse for piece in pieces]), r @ total
+    return factor, total
+
+
 class _Bands:
     """Bands in the orthonormal coordinates of the wide fit, each reduced to its own rank."""
 
-    def __init__(self, triangles: list[Triangle], r: np.ndarray, free: np.ndarray):
-        width = r.shape[1]
+    def __init__(self, triangles: list[Triangle], factor: np.ndarray):
+        width = factor.shape[1]
         shares, residuals, outside = [], [], []
-        inverse = covariance_factor(r)
-        for item in triangles:
-            share = item.r[:, free] @ inverse
+        ends = np.cumsum([len(item.z) for item in triangles])
+        for item, share in zip(triangles, np.split(factor, ends)[: len(ends)], strict=True):
             rotation, reduced, pivots = qr(share, mode="full", pivoting=True, check_finite=False)
             rank = max(int(np.sum(np.abs(np.diag(reduced)) > 1e-11)), 1)
             rotated = rotation.T @ item.z
