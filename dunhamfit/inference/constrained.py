@@ -2,8 +2,10 @@
 
 The lines enter through their triangles, so that a step costs p x p work. lmfit minimises
 |R (c(theta) - base) - z|^2 in steps of one sigma, with analytic derivatives and the user's
-bounds; Gauss-Newton steps then settle the last digits. Covariance is propagated through the
-Jacobian J of the map c(theta): C = J (J^T R^T R J)^-1 J^T, from triangular solves.
+bounds; Gauss-Newton steps, each a linear problem within the bounds (C. L. Lawson and R. J. Hanson,
+Solving Least Squares Problems, ch. 23), then settle which bounds hold and the last digits.
+Covariance is propagated through the Jacobian J of the map c(theta):
+C = J (J^T R^T R J)^-1 J^T, from triangular solves.
 """
 
 from __future__ import annotations
@@ -15,6 +17,7 @@ from typing import Protocol
 import lmfit
 import numpy as np
 from scipy.linalg import cholesky, solve_triangular
+from scipy.optimize import lsq_linear
 
 from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.least_squares import refine
@@ -206,35 +209,42 @@ def _minimise(triangles, constraint: ParameterMap, start: np.ndarray, limits: np
     result = lmfit.minimize(
         residual, parameters, method="leastsq", scale_covar=False, Dfun=derivatives, xtol=1e-14, ftol=1e-14, gtol=0.0
     )
-    free = start + scale * _steps(result.params, len(start))
-    low, high = limits.T
-    # lmfit keeps inside its bounds by a sine; within a millionth of sigma of one is at it.
-    active = (free - low < 1e-6 * scale) | (high - free < 1e-6 * scale)
-    free = np.where(free - low < 1e-6 * scale, low, np.where(high - free < 1e-6 * scale, high, free))
-    return _settled(whole, constraint, free, scale, ~active), active
+    free = np.clip(start + scale * _steps(result.params, len(start)), *limits.T)
+    return _settled(whole, constraint, free, scale, limits)
 
 
 def _steps(parameters: lmfit.Parameters, count: int) -> np.ndarray:
     return np.array([parameters[step_name(place)].value for place in range(count)])
 
 
-def _settled(whole: Triangle, constraint: ParameterMap, free: np.ndarray, scale: np.ndarray, kept: np.ndarray):
-    """Gauss-Newton steps for as long as they shrink, then a check that they are small."""
+def _settled(whole: Triangle, constraint: ParameterMap, free: np.ndarray, scale: np.ndarray, limits: np.ndarray):
+    """Gauss-Newton steps within the limits for as long as they shrink, then a check that they are small."""
     last = np.inf
     for _ in range(_ROUNDS):
-        local = _projected(whole, constraint, free, kept)
-        step = np.zeros_like(free)
-        step[kept] = solve_triangular(local.r, local.z)
-        size = float(np.sqrt(local.z @ local.z))
+        local = _projected(whole, constraint, free, np.ones(len(free), dtype=bool))
+        step, active = _step(local, (limits - free[:, None]) / scale[:, None], scale)
+        size = float(np.linalg.norm(local.r @ step))
         if not size < last / 2:
             break
-        free, last = free + step, size
+        free, last = np.clip(free + step, *limits.T), size
     if np.all(np.abs(step) <= np.maximum(_SETTLED * scale, _LAST_PLACES * np.spacing(np.abs(free)))):
-        return free
+        return free, active
     raise NotConverged(
         "the constrained fit did not settle; start from terms that the lines determine better",
         state=dict(zip(constraint.names, free.tolist(), strict=True)),
     )
+
+
+def _step(local: Triangle, steps: np.ndarray, scale: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """The step to the minimum of a linear problem, and which free parameters stand at a bound there.
+
+    Bounds are on either side of the present values: lmfit comes near to one that holds, but never says
+    whether it does, and cannot leave one that it starts from.
+    """
+    if not np.any(np.isfinite(steps)):
+        return solve_triangular(local.r, local.z), np.zeros(len(scale), dtype=bool)
+    found = lsq_linear(local.r * scale, local.z, bounds=(steps[:, 0], steps[:, 1]), method="bvls")
+    return scale * found.x, found.active_mask != 0
 
 
 def _checked(r: np.ndarray, constraint: ParameterMap) -> np.ndarray:
@@ -271,9 +281,10 @@ def _statistics(design: Design, triangles, noise: Noise, values: np.ndarray, r: 
 
 
 def _bound_warnings(constraint: ParameterMap, active: np.ndarray, bounds) -> tuple[str, ...]:
+    given = {identifier(name): list(pair) for name, pair in bounds.items()}
     return tuple(
-        f"{name} stands at a bound of {list(bounds[name])} cm-1: its sigma is shown as 0, and those of other "
-        "constants take it as known"
+        f"{name} stands at a bound of {given[identifier(name)]}{'' if name.startswith(('a_', 'scale[')) else ' cm-1'}: "
+        "its sigma is shown as 0, and those of other constants take it as known"
         for name, at_bound in zip(constraint.names, active, strict=True)
         if at_bound
     )

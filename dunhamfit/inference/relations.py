@@ -25,7 +25,7 @@ class Relations:
 
     def __init__(self, model: Model, relations: Mapping[str, str]):
         words = {item.name: identifier(item.name) for item in model.parameters}
-        constants = {words[item.name] for item in model.constants}
+        constants = [words[item.name] for item in model.constants]
         places = {words[item.name]: i for i, item in enumerate(model.parameters)}
         wanted = {identifier(name): text for name, text in relations.items()}
         for name in wanted:
