@@ -182,6 +182,10 @@ def test_a_bound_that_does_not_hold_changes_nothing(lines):
     {"Y01": (0.5, 9.0), "Y02": (0.5, 9.0)},
     {"Y10": (-9.0, -1.0), "Y20": (-9.0, -0.5), "Y02": (-8.0, 8.0)},
     {"Y10": (0.2, 9.0), "Y20": (0.2, 9.0), "Y11": (-5.0, 5.0)},
+    # Correlated, so that moving the one to its bound takes the other, which starts outside, well inside.
+    {"Y10": (9.0, np.inf), "Y20": (-np.inf, -1.0)},
+    {"Y01": (9.0, 20.0), "Y11": (-20.0, -1.0)},
+    {"Y01": (9.0, 20.0), "Y02": (1.0, 20.0)},
 ])  # fmt: skip
 def test_bounds_hold_where_a_general_solver_says_so(lines, moved):
     """Against bounded linear least squares of scipy, in units of sigma about the plain fit."""
