@@ -13,15 +13,14 @@ from dataclasses import fields, replace
 import numpy as np
 from scipy.linalg import cholesky
 
-from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
-from dunhamfit.algebra.rank import Rank
 from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge, solve
 from dunhamfit.errors import UsageError
 from dunhamfit.fit.design import Design, Groups, build_design
 from dunhamfit.fit.identify import check_rank, floating_bands, listed
+from dunhamfit.fit.merit import statistics_of
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.noise import Noise, as_stated, estimate
-from dunhamfit.fit.record import Fit, Statistics
+from dunhamfit.fit.record import Fit
 from dunhamfit.fit.remarks import noise_remarks
 from dunhamfit.fit.solve import fit_model
 from dunhamfit.lines.deferred import append_lines
@@ -151,36 +150,13 @@ def _fit(fit: Fit, model: Model, lines: LineList, triangles: list[Triangle], des
         factor=factor,
         noise=noise,
         groups=design.groups,
-        statistics=_statistics(triangles, noise, rank, len(free)),
+        statistics=statistics_of(triangles, noise, parameters=len(free), condition=rank.condition),
         warnings=_warnings(lines, design, noise),
         origins=fit.origins,
     )
     # `Fit.triangles` would be made from the lines on first use.
     vars(made)["triangles"] = triangles
     return made
-
-
-def _statistics(triangles: tuple[Triangle, ...], noise: Noise, rank: Rank, parameters: int) -> Statistics:
-    """Figures of merit from triangles about the solution."""
-    count = len(noise.label)
-    squares = np.array([item.z @ item.z + item.rss for item in triangles])
-    sizes = np.array([item.n for item in triangles])
-    factors = np.append(noise.by_group, np.ones(len(triangles) - count))
-    data, chi2 = int(sizes.sum()), float(squares.sum())
-    log_sigma = float(sum(item.log_sigma for item in triangles) + sizes @ np.log(factors))
-    likelihood = log_likelihood(float(np.sum(squares / factors**2)), data, log_sigma)
-    counted = parameters + len(noise.factors)
-    return Statistics(
-        lines=int(sizes[:count].sum()),
-        parameters=parameters,
-        dof=data - parameters,
-        chi2=chi2,
-        reduced_chi2=reduced_chi2(chi2, data - parameters),
-        condition=rank.condition,
-        log_likelihood=likelihood,
-        aicc=aicc(likelihood, data, counted),
-        bic=bic(likelihood, data, counted),
-    )
 
 
 def _warnings(lines: LineList, design: Design, noise: Noise) -> tuple[str, ...]:

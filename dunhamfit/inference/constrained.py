@@ -19,16 +19,16 @@ import numpy as np
 from scipy.linalg import cholesky, solve_triangular
 from scipy.optimize import lsq_linear
 
-from dunhamfit.algebra.criteria import aicc, bic, log_likelihood, reduced_chi2
 from dunhamfit.algebra.least_squares import refine
 from dunhamfit.algebra.rank import judge
 from dunhamfit.algebra.triangle import Triangle, covariance_factor, merge, reduce_rows, solve
 from dunhamfit.errors import CannotDetermine, NotConverged, UsageError
 from dunhamfit.fit.design import Design, build_design
 from dunhamfit.fit.identify import listed
+from dunhamfit.fit.merit import statistics_of
 from dunhamfit.fit.model import Model
 from dunhamfit.fit.noise import Noise, as_stated, check_policy, estimate
-from dunhamfit.fit.record import Fit, Statistics
+from dunhamfit.fit.record import Fit
 from dunhamfit.inference.origins import given_origins
 from dunhamfit.inference.potential_fit import PotentialMap
 from dunhamfit.inference.relations import Relations, identifier, step_name
@@ -125,7 +125,9 @@ def fit_constrained(
         factor=constraint.jacobian(free)[:, ~active] @ inner,
         noise=noise,
         groups=design.groups,
-        statistics=_statistics(design, triangles, noise, values, r),
+        statistics=statistics_of(
+            [item.shifted(values) for item in triangles], noise, parameters=len(r), condition=judge(r).condition
+        ),
         warnings=_bound_warnings(constraint, active, bounds),
         origins=MappingProxyType({**given_origins(model), **constraint.origins}),
         design_made=design,
@@ -257,27 +259,6 @@ def _checked(r: np.ndarray, constraint: ParameterMap) -> np.ndarray:
             terms=names,
         )
     return r
-
-
-def _statistics(design: Design, triangles, noise: Noise, values: np.ndarray, r: np.ndarray) -> Statistics:
-    chi2 = float(sum(item.chi2(values) for item in triangles))
-    weighted = _weighted(triangles, noise)
-    data, parameters = sum(item.n for item in triangles), len(r)
-    likelihood = log_likelihood(
-        float(sum(item.chi2(values) for item in weighted)), data, float(sum(item.log_sigma for item in weighted))
-    )
-    counted = parameters + len(noise.factors)
-    return Statistics(
-        lines=len(design.used),
-        parameters=parameters,
-        dof=data - parameters,
-        chi2=chi2,
-        reduced_chi2=reduced_chi2(chi2, data - parameters),
-        condition=judge(r).condition,
-        log_likelihood=likelihood,
-        aicc=aicc(likelihood, data, counted),
-        bic=bic(likelihood, data, counted),
-    )
 
 
 def _bound_warnings(constraint: ParameterMap, active: np.ndarray, bounds) -> tuple[str, ...]:
