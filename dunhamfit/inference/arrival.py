@@ -182,7 +182,8 @@ class _Problem:
     residual : ndarray of float, shape (n,)
         Of the prediction, over sigma.
     own : ndarray of float, shape (n, p)
-        Derivatives with respect to constants and calibration terms, over sigma.
+        Derivatives with respect to the constants, over sigma. Not to calibration terms: a scale multiplies
+        the observed positions, which hold the noise, so that beside free constants it would take all of it.
     rows : ndarray of float, shape (n, unknowns)
         Derivatives with respect to the unknowns, over sigma.
     prior : ndarray of float, shape (unknowns,)
@@ -298,7 +299,7 @@ def _problem(fit: Fit, lines: LineList) -> _Problem:
         position=lines.position[used],
         sigma=sigma,
         residual=residual / sigma,
-        own=own,
+        own=own[:, : len(model.constants)],
         rows=np.hstack([own[:, :old] @ fit.factor, own[:, old:]]),
         prior=np.append(np.ones(fit.factor.shape[1]), [0.0 if prior is None else 1 / prior.sigma for prior in priors]),
         free=tuple(item.kind for item, prior in zip(calibration, priors, strict=True) if prior is None),

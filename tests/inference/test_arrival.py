@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from arriving_band import NEW, OFFSET_SIGMA, SIGMA, exact_lines, fitted, moved, noisy, old_lines, simulate
@@ -186,3 +188,13 @@ def test_sources_without_shared_errors(rng):
     fit = fitted(noisy(old_lines(), rng))
     assert check_arrival(fit, noisy(plain, rng)).dof == len(plain)
     assert plain.sources == (Source("winter"),)
+
+
+def test_scatter_about_own_constants_is_that_of_the_noise(campaign):
+    """A scale with a prior must not take the noise away: its column holds the observed positions."""
+    fit, new = campaign
+    scaled = replace(new, sources=(replace(new.sources[0], scale=5e-8),))
+    found = check_arrival(fit, scaled)
+    assert found.scatter == pytest.approx(check_arrival(fit, new).scatter, rel=1e-12)
+    # About 94 degrees of freedom: four standard deviations of the root of their reduced chi2.
+    assert found.scatter == pytest.approx(1.0, abs=4 / np.sqrt(2 * 94))
