@@ -23,7 +23,7 @@ def fit_document(
     notices : tuple of str
         What was said while reading; they join the warnings.
     """
-    lines, stats = fit.lines, fit.statistics
+    lines, stats, noise = fit.lines, fit.statistics, fit.noise
     bands = summarise_bands(fit)
     return {
         "format": "dunhamfit-fit/1",
@@ -68,6 +68,18 @@ def fit_document(
         "calibration": _calibration(fit),
         "sources": [asdict(item) for item in summarise_sources(fit)],
         "bands": [asdict(item) for item in bands],
+        "noise_factors": [
+            {
+                "name": name,
+                "factor": float(factor),
+                "sigma": float(sigma),
+                "degrees": float(degrees),
+                "determined": bool(known),
+            }
+            for name, factor, sigma, degrees, known in zip(
+                noise.names, noise.factors, noise.sigmas, noise.degrees, noise.determined, strict=True
+            )
+        ],
         "excluded": [
             {
                 "source": lines.sources[lines.source[i]].name,

@@ -22,6 +22,8 @@ def fit_tables(fit: Fit) -> tuple[Table, ...]:
     if len(fit.values) > len(fit.constants):
         tables.append(calibration_table(fit))
     tables += [sources_table(fit), bands_table(fit)]
+    if fit.noise.policy == "per-band":
+        tables.append(noise_table(fit))
     findings = () if is_tied(fit) else find_systematics(fit)
     return (*tables, systematics_table(findings)) if striking(findings) else tuple(tables)
 
@@ -85,9 +87,7 @@ def sources_table(fit: Fit) -> Table:
     rows = []
     for item in summarise_sources(fit):
         factor = (
-            ""
-            if math.isnan(item.noise_factor)
-            else format_value(item.noise_factor, _known(item.noise_factor_sigma))
+            "" if math.isnan(item.noise_factor) else format_value(item.noise_factor, _known(item.noise_factor_sigma))
         )
         rows.append(
             (
@@ -108,6 +108,23 @@ def sources_table(fit: Fit) -> Table:
         Column("mean residual", "right", "cm-1"),
     )
     return Table("Sources", columns, tuple(rows))
+
+
+def noise_table(fit: Fit) -> Table:
+    """Noise factors of the bands, where each has its own."""
+    noise = fit.noise
+    rows = [
+        (
+            name,
+            format_value(float(factor), float(sigma)) if known else "1 (too few lines)",
+            f"{degrees:.1f}",
+        )
+        for name, factor, sigma, degrees, known in zip(
+            noise.names, noise.factors, noise.sigmas, noise.degrees, noise.determined, strict=True
+        )
+    ]
+    columns = (Column("band"), Column("noise factor", "decimal"), Column("degrees of freedom", "right"))
+    return Table("Noise factors", columns, tuple(rows))
 
 
 def bands_table(fit: Fit) -> Table:
