@@ -144,7 +144,9 @@ def test_values_and_slopes_are_those_of_a_general_program(text, values):
             return
     for mine, other in zip([found.value, *found.gradient], [value, *slopes], strict=True):
         size = max(abs(float(other)), max(abs(float(s)) for s in slopes), abs(float(value)))
-        assert abs(mine - float(other)) <= 1e-7 * size + 1e-300
+        # Constants such as 2**0.5 are plain floats in the text evaluated here too: a difference of two of them that
+        # should vanish is left with their rounding.
+        assert abs(mine - float(other)) <= 1e-7 * size + 1e-12
 
 
 def _amplified(text: str, values) -> float:
