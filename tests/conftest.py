@@ -11,6 +11,13 @@ for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
 
 import numpy as np  # noqa: E402
 import pytest  # noqa: E402
+from hypothesis import settings  # noqa: E402
+
+# The same examples on every run, and no clock: a test must not fail for the machine's sake. To search for
+# new examples: pytest --hypothesis-profile=search
+settings.register_profile("repeatable", derandomize=True, deadline=None)
+settings.register_profile("search", deadline=None, max_examples=2000)
+settings.load_profile("repeatable")
 
 SHARED = Path(__file__).resolve().parents[2] / "shared" / "reference"
 
